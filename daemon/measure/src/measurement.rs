@@ -91,10 +91,16 @@ impl fmt::Display for Reason {
             Reason::FlatT(uv) => write!(f, "T wave is flat ({:.0} uV)", uv.get()),
             Reason::Noise => write!(f, "noise covers the T wave"),
             Reason::TpFused => write!(f, "T wave runs into the next P wave"),
-            Reason::LateWave => write!(f, "a second wave follows T; it may be a U wave or part of T"),
+            Reason::LateWave => {
+                write!(f, "a second wave follows T; it may be a U wave or part of T")
+            }
             Reason::Paced => write!(f, "pacing spikes found"),
-            Reason::WideQrs(ms) => write!(f, "QRS is wide ({:.0} ms); QT holds depolarisation too", ms.get()),
-            Reason::Rate(bpm) => write!(f, "rate of {:.0}/min is outside the range checked", bpm.get()),
+            Reason::WideQrs(ms) => {
+                write!(f, "QRS is wide ({:.0} ms); QT holds depolarisation too", ms.get())
+            }
+            Reason::Rate(bpm) => {
+                write!(f, "rate of {:.0}/min is outside the range checked", bpm.get())
+            }
             Reason::IrregularlyIrregular => {
                 write!(f, "rhythm is irregularly irregular; the value is a mean over beats")
             }

@@ -148,7 +148,11 @@ impl Recording {
         for signal in &leads {
             let lead = || signal.lead.name().to_owned();
             if signal.uv.len() != expected {
-                return Err(NotARecording::Ragged { lead: lead(), found: signal.uv.len(), expected });
+                return Err(NotARecording::Ragged {
+                    lead: lead(),
+                    found: signal.uv.len(),
+                    expected,
+                });
             }
             if let Some(&uv) = signal.uv.iter().find(|uv| uv.abs() > Self::LARGEST_UV) {
                 return Err(NotARecording::OutOfRange { lead: lead(), uv });
