@@ -1,1 +1,3 @@
 //! The service.
+
+pub mod draw;
