@@ -178,6 +178,29 @@ pub enum Body {
         /// Silent (`true`) or heard again (`false`).
         silent: bool,
     },
+    /// Something of the service's own is in trouble, or well again: a technical alert.
+    Service {
+        /// What.
+        trouble: Trouble,
+        /// In trouble (`true`) or well again (`false`).
+        present: bool,
+    },
+}
+
+/// What can go wrong with the service itself, so that its silence would not be a ward's calm.
+#[derive(Debug, Clone, Copy, PartialEq, Eq, Hash, PartialOrd, Ord, Serialize, Deserialize)]
+#[serde(rename_all = "kebab-case")]
+pub enum Trouble {
+    /// The disk that holds the store is nearly full.
+    Disk,
+    /// The mail server can't be reached or refuses everything.
+    Mail,
+    /// The export folder is gone, was replaced by another, or can't be read.
+    Folder,
+    /// A changed settings, protocol or medicine file was refused; the last good one still holds.
+    Settings,
+    /// Facts folded again after a start gave other decisions than those that were stored.
+    History,
 }
 
 /// Where a patient lies.
