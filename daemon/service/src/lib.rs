@@ -1,3 +1,4 @@
 //! The service.
 
+pub mod agree;
 pub mod draw;
