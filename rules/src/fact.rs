@@ -46,7 +46,7 @@ pub enum Source {
 
 /// What is known.
 #[derive(Debug, Clone, PartialEq, Serialize, Deserialize)]
-#[serde(tag = "kind", rename_all = "kebab-case")]
+#[serde(tag = "kind", content = "is", rename_all = "kebab-case")]
 pub enum Body {
     /// Came onto a ward.
     Admitted(Place),
