@@ -1,4 +1,6 @@
 //! The service.
 
 pub mod agree;
+pub mod clock;
 pub mod draw;
+pub mod store;

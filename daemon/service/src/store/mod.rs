@@ -1,0 +1,159 @@
+//! What is remembered: one SQLite file with one writer, and the original bytes beside it by content hash.
+
+mod audit;
+mod content;
+pub mod outbox;
+mod read;
+mod schema;
+mod write;
+
+pub use content::Contents;
+pub use read::{AlertRow, Broken, FileRow, Reader};
+pub use write::{Held, Outcome, Seen, Stamp, Taken, What, Writing};
+
+use ebbmark_rules::fact::At;
+use rusqlite::{Connection, OpenFlags};
+use std::path::{Path, PathBuf};
+use std::time::Duration;
+
+/// Why the store can't do what was asked.
+#[derive(Debug, thiserror::Error)]
+pub enum StoreError {
+    /// SQLite refused or failed.
+    #[error("cannot {doing} the store: {source}")]
+    Sql {
+        /// What was tried.
+        doing: &'static str,
+        /// SQLite's own words.
+        source: rusqlite::Error,
+    },
+    /// A file beside the database could not be read or written.
+    #[error("cannot {doing} {}", path.display())]
+    Io {
+        /// What was tried.
+        doing: &'static str,
+        /// Where.
+        path: PathBuf,
+        /// The system's own words.
+        source: std::io::Error,
+    },
+    /// A newer program made it.
+    #[error(
+        "the store has version {found}, and this program knows up to {known}; start the newer program again"
+    )]
+    FromTheFuture {
+        /// The store's version.
+        found: i64,
+        /// The last one known.
+        known: i64,
+    },
+    /// A row is not what this program wrote.
+    #[error("a row of `{table}` can't be read back: {why}")]
+    Row {
+        /// Which table.
+        table: &'static str,
+        /// What is wrong, without patient text.
+        why: String,
+    },
+    /// A message moved in a way that its state does not allow: it was claimed by nobody, or settled twice.
+    #[error("message {id} is not `{expected}`, so it can't be moved on")]
+    NotThere {
+        /// The message's row.
+        id: i64,
+        /// The state that was expected.
+        expected: &'static str,
+    },
+    /// An earlier failure stopped the writer.
+    #[error("the store stopped after an earlier failure; the service has to start again")]
+    Stopped,
+}
+
+impl StoreError {
+    fn sql(doing: &'static str) -> impl FnOnce(rusqlite::Error) -> StoreError {
+        move |source| StoreError::Sql { doing, source }
+    }
+}
+
+/// Where a store lives: a folder with the database and the kept contents.
+#[derive(Debug, Clone)]
+pub struct StorePath {
+    folder: PathBuf,
+}
+
+impl StorePath {
+    /// A store in this folder.
+    pub fn new(folder: impl Into<PathBuf>) -> Self {
+        Self { folder: folder.into() }
+    }
+
+    /// The folder itself.
+    pub fn folder(&self) -> &Path {
+        &self.folder
+    }
+
+    /// The database file.
+    pub fn database(&self) -> PathBuf {
+        self.folder.join("ebbmark.sqlite")
+    }
+
+    /// The folder of kept contents.
+    pub fn contents(&self) -> Contents {
+        Contents::new(self.folder.join("content"))
+    }
+}
+
+/// The one read-write connection.
+#[derive(Debug)]
+pub struct Store {
+    connection: Connection,
+}
+
+/// How long a statement waits for a lock that only a backup or a foreign tool could hold.
+const BUSY: Duration = Duration::from_secs(10);
+
+impl Store {
+    /// Opens or makes the store, and brings it to this program's version.
+    ///
+    /// # Errors
+    /// The folder can't be made, the file is no database, is locked by another writer for longer than ten seconds, or
+    /// comes from a newer program.
+    pub fn open(path: &StorePath) -> Result<Self, StoreError> {
+        std::fs::create_dir_all(path.folder()).map_err(|source| StoreError::Io {
+            doing: "make the folder",
+            path: path.folder().to_owned(),
+            source,
+        })?;
+        let flags = OpenFlags::SQLITE_OPEN_READ_WRITE
+            | OpenFlags::SQLITE_OPEN_CREATE
+            | OpenFlags::SQLITE_OPEN_NO_MUTEX
+            | OpenFlags::SQLITE_OPEN_NOFOLLOW;
+        let database = path.database();
+        let database = resolved(&database).join("ebbmark.sqlite");
+        let mut connection =
+            Connection::open_with_flags(database, flags).map_err(StoreError::sql("open"))?;
+        connection.busy_timeout(BUSY).map_err(StoreError::sql("set up"))?;
+        // FULL, not NORMAL: in simulated power cuts NORMAL lost commits that had been acknowledged.
+        connection
+            .execute_batch(
+                "PRAGMA journal_mode = WAL; PRAGMA synchronous = FULL; PRAGMA foreign_keys = ON;
+                 PRAGMA trusted_schema = OFF; PRAGMA secure_delete = ON;",
+            )
+            .map_err(StoreError::sql("set up"))?;
+        schema::migrate(&mut connection)?;
+        Ok(Self { connection })
+    }
+}
+
+/// `SQLITE_OPEN_NOFOLLOW` refuses a link anywhere in the path; only the file itself must not be one.
+fn resolved(database: &Path) -> PathBuf {
+    let folder = database.parent().unwrap_or(Path::new("."));
+    folder.canonicalize().unwrap_or_else(|_| folder.to_owned())
+}
+
+fn micros(at: At) -> i64 {
+    at.timestamp_micros()
+}
+
+fn moment(micros: i64) -> At {
+    At::from_timestamp_micros(micros).unwrap_or(At::UNIX_EPOCH)
+}

@@ -1,0 +1,270 @@
+//! The outbox: one message to one recipient about one step of one alert.
+//!
+//! ```text
+//! pending --claim--> claimed --sent-----> sent      (250 after the final dot, and only then)
+//!                      |  ^   --refused--> refused  (5xx on the recipient)
+//!                 wait |  | claim
+//!                      v  |
+//!                     waiting -----------> moot     (somebody answered the alert while it waited)
+//! ```
+//!
+//! A claim is committed before anyone connects. A message found claimed at a start fell into the gap in which nobody
+//! knows whether the server took it: it waits and goes out again, the same bytes under the same Message-ID.
+
+use super::write::Writing;
+use super::{Store, StoreError, audit, micros, moment};
+use ebbmark_rules::alert::{Notice, NoticeReason};
+use ebbmark_rules::fact::At;
+use ebbmark_rules::ids::{AlertId, ContentHash, Private};
+use rusqlite::{OptionalExtension, params};
+
+/// A message on its way out.
+#[derive(Debug, Clone, PartialEq)]
+pub struct Outgoing {
+    /// Its row.
+    pub id: i64,
+    /// About which alert.
+    pub alert: AlertId,
+    /// About which notice of it.
+    pub step: u32,
+    /// To whom: an address.
+    pub recipient: Private,
+    /// Its identity for good, without the angle brackets.
+    pub message_id: String,
+    /// The whole message, rendered once. Hidden from `Debug` by its type's owner: never log it.
+    pub bytes: Bytes,
+    /// How often it was claimed before this time.
+    pub attempts: u32,
+    /// When it was put in the outbox.
+    pub created_at: At,
+}
+
+/// A message's bytes; `Debug` says only how many.
+#[derive(Clone, PartialEq, Eq)]
+pub struct Bytes(pub Vec<u8>);
+
+impl std::fmt::Debug for Bytes {
+    fn fmt(&self, f: &mut std::fmt::Formatter<'_>) -> std::fmt::Result {
+        write!(f, "{} bytes", self.0.len())
+    }
+}
+
+/// How a claimed message ended.
+#[derive(Debug, Clone, PartialEq, Eq)]
+pub enum Sending {
+    /// The server answered 250 after the final dot.
+    Sent {
+        /// Its words.
+        reply: String,
+    },
+    /// The server refuses this recipient for good.
+    Refused {
+        /// Its words.
+        reply: String,
+    },
+    /// Not now.
+    Waiting {
+        /// When to try again.
+        next_try: At,
+        /// Why, in the server's or the system's words.
+        why: String,
+    },
+}
+
+/// A message's identity: a function of alert, step and recipient, so that nothing can make a second one.
+pub fn message_id(alert: &AlertId, step: u32, recipient: &Private, domain: &str) -> String {
+    let name = format!("{}\n{step}\n{}", alert.as_str(), recipient.expose());
+    let hash = ContentHash::of(name.as_bytes());
+    format!("{}@{domain}", hash.as_str().get(..40).unwrap_or_default())
+}
+
+fn asks(reason: &NoticeReason) -> bool {
+    match reason {
+        NoticeReason::Raised
+        | NoticeReason::TierRaised
+        | NoticeReason::Escalated
+        | NoticeReason::SnoozeEnded
+        | NoticeReason::HandedOver => true,
+        NoticeReason::Withdrawn | NoticeReason::Closed => false,
+    }
+}
+
+impl Writing<'_> {
+    /// Puts a rendered message in the outbox.
+    ///
+    /// # Errors
+    /// The same message is there already (the decider gave one notice twice), or the store failed.
+    pub fn post(
+        &self,
+        notice: &Notice,
+        recipient: &Private,
+        message_id: &str,
+        bytes: &[u8],
+    ) -> Result<(), StoreError> {
+        let now = micros(self.at());
+        self.sql()
+            .prepare_cached(
+                "INSERT INTO outbox (alert, step, recipient, role, asks, message_id, bytes, state, created_us, next_try_us)
+                 VALUES (?, ?, ?, ?, ?, ?, ?, 'pending', ?, ?)",
+            )
+            .and_then(|mut insert| {
+                insert.execute(params![
+                    notice.alert.id.as_str(),
+                    notice.step,
+                    recipient.expose(),
+                    notice.role.as_str(),
+                    asks(&notice.reason),
+                    message_id,
+                    bytes,
+                    now,
+                    now
+                ])
+            })
+            .map_err(StoreError::sql("add a message to"))?;
+        let id = self.sql().last_insert_rowid();
+        let text = format!("pending {}", ContentHash::of(bytes).as_str());
+        audit::append(self.sql(), self.at(), &format!("message {id}"), &text)
+    }
+
+    /// Claims up to `limit` messages that are due, oldest first. Commit before connecting.
+    pub fn claim(&self, limit: usize) -> Result<Vec<Outgoing>, StoreError> {
+        let read = || StoreError::sql("claim messages in");
+        let mut query = self
+            .sql()
+            .prepare_cached(
+                "SELECT id, alert, step, recipient, message_id, bytes, attempts, created_us FROM outbox
+                 WHERE state IN ('pending', 'waiting') AND next_try_us <= ? ORDER BY next_try_us, id LIMIT ?",
+            )
+            .map_err(read())?;
+        let due = query
+            .query_map(
+                params![micros(self.at()), i64::try_from(limit).unwrap_or(i64::MAX)],
+                |row| {
+                    Ok(Outgoing {
+                        id: row.get(0)?,
+                        alert: AlertId::new(row.get::<_, String>(1)?),
+                        step: row.get(2)?,
+                        recipient: Private::new(row.get::<_, String>(3)?),
+                        message_id: row.get(4)?,
+                        bytes: Bytes(row.get(5)?),
+                        attempts: row.get(6)?,
+                        created_at: moment(row.get(7)?),
+                    })
+                },
+            )
+            .and_then(Iterator::collect::<Result<Vec<_>, _>>)
+            .map_err(read())?;
+        for message in &due {
+            self.sql()
+                .prepare_cached(
+                    "UPDATE outbox SET state = 'claimed', attempts = attempts + 1 WHERE id = ?",
+                )
+                .and_then(|mut update| update.execute([message.id]))
+                .map_err(read())?;
+            audit::append(self.sql(), self.at(), &format!("message {}", message.id), "claimed")?;
+        }
+        Ok(due)
+    }
+
+    /// Records how a claimed message ended; gives what it was about.
+    ///
+    /// # Errors
+    /// It was not claimed.
+    pub fn settle(
+        &self,
+        id: i64,
+        sending: &Sending,
+    ) -> Result<(AlertId, u32, Private), StoreError> {
+        let (state, settled, next_try, reply) = match sending {
+            Sending::Sent { reply } => ("sent", Some(micros(self.at())), None, reply),
+            Sending::Refused { reply } => ("refused", Some(micros(self.at())), None, reply),
+            Sending::Waiting { next_try, why } => ("waiting", None, Some(micros(*next_try)), why),
+        };
+        let about = self
+            .sql()
+            .prepare_cached(
+                "UPDATE outbox SET state = ?2, settled_us = ?3, next_try_us = coalesce(?4, next_try_us), reply = ?5
+                 WHERE id = ?1 AND state = 'claimed' RETURNING alert, step, recipient",
+            )
+            .and_then(|mut update| {
+                update
+                    .query_row(params![id, state, settled, next_try, reply], |row| {
+                        let (alert, recipient): (String, String) = (row.get(0)?, row.get(2)?);
+                        Ok((AlertId::new(alert), row.get(1)?, Private::new(recipient)))
+                    })
+                    .optional()
+            })
+            .map_err(StoreError::sql("settle a message in"))?
+            .ok_or(StoreError::NotThere { id, expected: "claimed" })?;
+        audit::append(
+            self.sql(),
+            self.at(),
+            &format!("message {id}"),
+            &format!("{state} {reply}"),
+        )?;
+        let answered = self
+            .sql()
+            .prepare_cached("SELECT 1 FROM alert WHERE id = ? AND state <> 'open'")
+            .and_then(|mut query| query.exists([about.0.as_str()]))
+            .map_err(StoreError::sql("settle a message in"))?;
+        if answered {
+            self.moot(&about.0)?;
+        }
+        Ok(about)
+    }
+
+    /// Ends the retries of messages about an alert that somebody answered, or that facts ended: the first attempt at
+    /// a message is always made, and repeated while nobody answered.
+    pub(super) fn moot(&self, alert: &AlertId) -> Result<(), StoreError> {
+        let ended = self
+            .sql()
+            .prepare_cached(
+                "UPDATE outbox SET state = 'moot', settled_us = ? WHERE alert = ? AND state = 'waiting' AND asks = 1 RETURNING id",
+            )
+            .and_then(|mut update| {
+                update
+                    .query_map(params![micros(self.at()), alert.as_str()], |row| row.get::<_, i64>(0))?
+                    .collect::<Result<Vec<_>, _>>()
+            })
+            .map_err(StoreError::sql("end messages in"))?;
+        for id in ended {
+            audit::append(self.sql(), self.at(), &format!("message {id}"), "moot")?;
+        }
+        Ok(())
+    }
+
+    /// At a start: messages that were claimed when the last run ended go back to waiting, due now. Gives how many.
+    pub fn unclaim(&self) -> Result<usize, StoreError> {
+        let gap = self
+            .sql()
+            .prepare("SELECT id FROM outbox WHERE state = 'claimed' ORDER BY id")
+            .and_then(|mut query| {
+                query.query_map([], |row| row.get(0))?.collect::<Result<Vec<i64>, _>>()
+            })
+            .map_err(StoreError::sql("find claimed messages in"))?;
+        for &id in &gap {
+            self.settle(
+                id,
+                &Sending::Waiting {
+                    next_try: self.at(),
+                    why: "the service stopped while sending".to_owned(),
+                },
+            )?;
+        }
+        Ok(gap.len())
+    }
+}
+
+impl Store {
+    /// When the next message is due, if any waits.
+    pub fn next_message(&self) -> Result<Option<At>, StoreError> {
+        let next: Option<i64> = self
+            .connection
+            .prepare_cached(
+                "SELECT min(next_try_us) FROM outbox WHERE state IN ('pending', 'waiting')",
+            )
+            .and_then(|mut query| query.query_row([], |row| row.get(0)))
+            .map_err(StoreError::sql("find the next message of"))?;
+        Ok(next.map(moment))
+    }
+}
