@@ -3,4 +3,6 @@
 pub mod agree;
 pub mod clock;
 pub mod draw;
+pub mod page;
+pub mod people;
 pub mod store;
