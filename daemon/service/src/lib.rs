@@ -3,6 +3,8 @@
 pub mod agree;
 pub mod clock;
 pub mod draw;
+pub mod intake;
+pub mod ledger;
 pub mod page;
 pub mod people;
 pub mod store;

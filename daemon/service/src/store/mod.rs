@@ -7,9 +7,10 @@ mod read;
 mod schema;
 mod write;
 
+pub use audit::AuditCheck;
 pub use content::Contents;
-pub use read::{AlertRow, Broken, FileRow, Reader};
-pub use write::{Held, Outcome, Seen, Stamp, Taken, What, Writing};
+pub use read::{AlertRow, FileRow, Reader};
+pub use write::{Held, Outcome, Seen, Stamp, Taken, TextKind, What, Writing};
 
 use ebbmark_rules::fact::At;
 use rusqlite::{Connection, OpenFlags};

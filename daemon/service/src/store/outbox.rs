@@ -126,6 +126,14 @@ impl Writing<'_> {
         audit::append(self.sql(), self.at(), &format!("message {id}"), &text)
     }
 
+    /// Whether a message about this step of this alert was put in the outbox.
+    pub fn is_posted(&self, alert: &AlertId, step: u32) -> Result<bool, StoreError> {
+        self.sql()
+            .prepare_cached("SELECT 1 FROM outbox WHERE alert = ? AND step = ?")
+            .and_then(|mut query| query.exists(params![alert.as_str(), step]))
+            .map_err(StoreError::sql("look a message up in"))
+    }
+
     /// Claims up to `limit` messages that are due, oldest first. Commit before connecting.
     pub fn claim(&self, limit: usize) -> Result<Vec<Outgoing>, StoreError> {
         let read = || StoreError::sql("claim messages in");

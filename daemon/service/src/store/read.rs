@@ -7,7 +7,7 @@ use super::{StoreError, StorePath, moment, resolved};
 use ebbmark_rules::alert::{Alert, Decision};
 use ebbmark_rules::fact::{At, Fact};
 use ebbmark_rules::ids::ContentHash;
-use rusqlite::{Connection, OpenFlags, OptionalExtension, params};
+use rusqlite::{Connection, OpenFlags, params};
 use serde::de::DeserializeOwned;
 use std::collections::BTreeMap;
 use std::path::PathBuf;
@@ -48,17 +48,6 @@ pub struct AlertRow {
     pub alert: Alert,
     /// Everything that happened to it, in order.
     pub life: Vec<Decision>,
-}
-
-/// What the fold of the stored facts is held against.
-#[derive(Debug, Clone, Copy, PartialEq, Eq, Default)]
-pub struct Broken {
-    /// Decisions that were stored.
-    pub stored: u64,
-    /// Decisions that folding gave again.
-    pub folded: u64,
-    /// How many of them are not the same, place by place.
-    pub different: u64,
 }
 
 impl Reader {
@@ -225,16 +214,27 @@ impl Reader {
         Ok(())
     }
 
-    /// Hands the JSON of every decision, in order, to `each`.
-    pub fn decisions(&self, mut each: impl FnMut(&str)) -> Result<(), StoreError> {
-        let fail = || StoreError::sql("read the decisions of");
-        let mut query =
-            self.connection.prepare("SELECT body FROM decision ORDER BY seq").map_err(fail())?;
-        let mut rows = query.query([]).map_err(fail())?;
-        while let Some(row) = rows.next().map_err(fail())? {
-            each(row.get_ref(0).and_then(|body| Ok(body.as_str()?)).map_err(fail())?);
-        }
-        Ok(())
+    /// Up to a thousand decisions after number `seq`, in order, as JSON.
+    pub fn decisions_after(&self, seq: i64) -> Result<Vec<(i64, String)>, StoreError> {
+        self.connection
+            .prepare_cached("SELECT seq, body FROM decision WHERE seq > ? ORDER BY seq LIMIT 1000")
+            .and_then(|mut query| {
+                query.query_map([seq], |row| Ok((row.get(0)?, row.get(1)?)))?.collect()
+            })
+            .map_err(StoreError::sql("read the decisions of"))
+    }
+
+    /// As of when the last decision was taken.
+    pub fn last_decision(&self) -> Result<Option<At>, StoreError> {
+        let last: Option<i64> = self
+            .connection
+            .query_row(
+                "SELECT max(at_us) FROM (SELECT at_us FROM decision ORDER BY seq DESC LIMIT 1000)",
+                [],
+                |row| row.get(0),
+            )
+            .map_err(StoreError::sql("read the last moment of"))?;
+        Ok(last.map(moment))
     }
 
     /// The hash of the last audit row.
@@ -245,24 +245,6 @@ impl Reader {
     /// Checks the whole audit chain against itself and against the rows that it speaks of.
     pub fn audit(&self) -> Result<AuditCheck, StoreError> {
         audit::check(&self.connection)
-    }
-
-    /// The text last put in force by a fact of this kind (`protocol-in-force`), if any was.
-    pub fn in_force(&self, kind: &str) -> Result<Option<ContentHash>, StoreError> {
-        let body: Option<String> = self
-            .connection
-            .prepare_cached("SELECT body FROM fact WHERE kind = ? ORDER BY seq DESC LIMIT 1")
-            .and_then(|mut query| query.query_row([kind], |row| row.get(0)).optional())
-            .map_err(StoreError::sql("read what is in force in"))?;
-        use ebbmark_rules::fact::Body;
-        let Some(body) = body else { return Ok(None) };
-        let fact: Fact = parse("fact", &body)?;
-        Ok(match fact.body {
-            Body::ProtocolInForce(hash)
-            | Body::MedicinesInForce(hash)
-            | Body::CodesInForce(hash) => Some(hash),
-            _ => None,
-        })
     }
 }
 

@@ -6,8 +6,9 @@ use ebbmark_formats::BadRow;
 use ebbmark_rules::alert::{Alert, AlertState, Decision, LifeStep};
 use ebbmark_rules::fact::{At, Fact, Source};
 use ebbmark_rules::ids::{AlertId, ContentHash};
-use rusqlite::{OptionalExtension, Transaction, TransactionBehavior, params};
+use rusqlite::{Transaction, TransactionBehavior, params};
 use serde::Serialize;
+use std::collections::BTreeSet;
 use std::ffi::OsString;
 use std::os::unix::ffi::OsStrExt;
 use std::path::PathBuf;
@@ -330,19 +331,37 @@ impl Writing<'_> {
         Ok(hash)
     }
 
-    /// The last moment that anything in the store speaks of as learned or decided: time never goes back behind it.
-    pub fn last_moment(&self) -> Result<Option<At>, StoreError> {
-        let last: Option<i64> = self
+    /// Closes every open alert but these: what folding no longer gives is not left open with nobody to close it.
+    pub fn close_all_but<'a>(
+        &self,
+        standing: impl Iterator<Item = &'a AlertId>,
+    ) -> Result<(), StoreError> {
+        let standing: BTreeSet<&str> = standing.map(AlertId::as_str).collect();
+        let open = self
             .change
-            .query_row(
-                "SELECT max(coalesce((SELECT max(received_us) FROM fact), 0),
-                            coalesce((SELECT max(at_us) FROM (SELECT at_us FROM decision ORDER BY seq DESC LIMIT 1000)), 0))",
-                [],
-                |row| row.get(0),
-            )
-            .optional()
-            .map_err(StoreError::sql("read the last moment of"))?;
-        Ok(last.filter(|&micros| micros > 0).map(super::moment))
+            .prepare("SELECT id FROM alert WHERE state IN ('open', 'acknowledged')")
+            .and_then(|mut query| {
+                query.query_map([], |row| row.get(0))?.collect::<Result<Vec<String>, _>>()
+            })
+            .map_err(StoreError::sql("list alerts of"))?;
+        for id in open.iter().filter(|id| !standing.contains(id.as_str())) {
+            self.change
+                .execute("UPDATE alert SET state = 'closed' WHERE id = ?", [id])
+                .map_err(StoreError::sql("change an alert in"))?;
+            audit::append(
+                &self.change,
+                self.at,
+                &format!("alert {id}"),
+                "closed: folding no longer gives it",
+            )?;
+        }
+        Ok(())
+    }
+
+    /// Writes an alert as it stands, with an audit row and without a decision.
+    pub fn stand(&self, alert: &Alert) -> Result<(), StoreError> {
+        self.alert(alert)?;
+        audit::append(&self.change, self.at, &format!("alert {}", alert.id), &json("alert", alert)?)
     }
 }
 

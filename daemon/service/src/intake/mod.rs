@@ -1,0 +1,4 @@
+//! Intake.
+pub mod open;
+pub mod scan;
+pub mod settle;
