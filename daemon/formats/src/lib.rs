@@ -1,5 +1,8 @@
 //! Bytes in, a recording or chart rows out. Content is recognised by its bytes, never by its name.
 
+mod wfdb;
+
+use chrono::{LocalResult, NaiveDateTime, Offset, TimeZone, Utc};
 use ebbmark_measure::Recording;
 use ebbmark_rules::fact::{At, Body, Description, Printed};
 use ebbmark_rules::ids::{PatientId, TracingId};
@@ -11,6 +14,85 @@ pub struct Site {
     pub zone: chrono_tz::Tz,
     /// The issuer of patient numbers that came without one.
     pub issuer: Box<str>,
+}
+
+impl Site {
+    /// A local time as UTC in the site's zone, the zone's name, and a note where the clock change makes it ambiguous
+    /// (the earlier is taken) or skips it (read with the offset before the change).
+    pub(crate) fn resolve(&self, local: NaiveDateTime) -> (At, Box<str>, Option<&'static str>) {
+        let zone = self.zone.name().into();
+        match self.zone.from_local_datetime(&local) {
+            LocalResult::Single(at) => (at.with_timezone(&Utc), zone, None),
+            LocalResult::Ambiguous(earlier, _) => (
+                earlier.with_timezone(&Utc),
+                zone,
+                Some("its time falls in the hour that the clock change repeats"),
+            ),
+            LocalResult::None => {
+                let before =
+                    self.zone.offset_from_utc_datetime(&(local - chrono::TimeDelta::hours(3)));
+                let at = (local - before.fix()).and_utc();
+                (at, zone, Some("its time falls in the hour that the clock change skips"))
+            }
+        }
+    }
+}
+
+/// A format, recognised by content.
+#[derive(Debug, Clone, Copy, PartialEq, Eq)]
+pub enum Kind {
+    /// A WFDB record header; its samples lie in files beside it.
+    Wfdb,
+}
+
+/// Recognises a format by its bytes, never by its name. `None`: nothing that is read.
+pub fn sniff(bytes: &[u8]) -> Option<Kind> {
+    wfdb::looks_like_header(bytes).then_some(Kind::Wfdb)
+}
+
+/// The files that must lie beside this one before it can be read; plain names in the same folder.
+pub fn companions(kind: Kind, bytes: &[u8]) -> Result<Vec<String>, Error> {
+    match kind {
+        Kind::Wfdb => wfdb::companions(bytes),
+    }
+}
+
+/// Reads a file with its companions.
+pub fn read(
+    kind: Kind,
+    bytes: &[u8],
+    companions: &Companions<'_>,
+    site: &Site,
+) -> Result<Content, Error> {
+    match kind {
+        Kind::Wfdb => wfdb::read(bytes, companions, site),
+    }
+}
+
+/// The contents of companion files by name.
+#[derive(Debug, Default)]
+pub struct Companions<'a>(Vec<(&'a str, &'a [u8])>);
+
+impl<'a> Companions<'a> {
+    /// Adds one.
+    pub fn add(&mut self, name: &'a str, bytes: &'a [u8]) {
+        self.0.push((name, bytes));
+    }
+
+    fn get(&self, name: &str) -> Option<&'a [u8]> {
+        self.0.iter().find(|(known, _)| *known == name).map(|(_, bytes)| *bytes)
+    }
+}
+
+/// Why a file was not read, in words without patient text.
+#[derive(Debug, Clone, PartialEq, Eq, thiserror::Error)]
+pub enum Error {
+    /// It is not complete: look again later.
+    #[error("{0}")]
+    NotYet(String),
+    /// A person has to look: hold it with this reason.
+    #[error("{0}")]
+    Hold(String),
 }
 
 /// What a file held.
