@@ -7,4 +7,5 @@ pub mod intake;
 pub mod ledger;
 pub mod page;
 pub mod people;
+pub mod report;
 pub mod store;

@@ -1,0 +1,28 @@
+//! The committee's evening: what the alerts of a period were worth. Figures are a pure function of stored facts and
+//! decisions; HTML, CSV and JSON lines lay out the same figures.
+
+mod days;
+mod figures;
+mod life;
+
+pub use days::{PatientDays, Stays};
+pub use figures::{Figures, Spread, figures};
+pub use life::{AlertLife, lives};
+
+use ebbmark_rules::fact::At;
+
+/// From (inclusive) to (exclusive).
+#[derive(Debug, Clone, Copy, PartialEq, Eq)]
+pub struct Period {
+    /// First moment inside.
+    pub from: At,
+    /// First moment after.
+    pub to: At,
+}
+
+impl Period {
+    /// Whether a moment lies inside.
+    pub fn holds(&self, at: At) -> bool {
+        self.from <= at && at < self.to
+    }
+}
