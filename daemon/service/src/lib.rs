@@ -8,4 +8,5 @@ pub mod ledger;
 pub mod page;
 pub mod people;
 pub mod report;
+pub mod settings;
 pub mod store;

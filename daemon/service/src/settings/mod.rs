@@ -1,0 +1,176 @@
+//! Settings: `ebbmark.toml` as written, then checked once. Past that point nothing checks them again.
+
+mod check;
+mod place;
+mod raw;
+
+pub use place::{Problem, Problems};
+
+use chrono_tz::Tz;
+use std::fmt;
+use std::path::{Path, PathBuf};
+use std::time::Duration;
+
+/// Checked settings.
+#[derive(Debug, Clone, PartialEq)]
+pub struct Settings {
+    /// Who and where this is.
+    pub site: Site,
+    /// Where things are; absolute, or relative to the working folder as given on the command line.
+    pub folders: Folders,
+    /// How files are taken in.
+    pub intake: Intake,
+    /// How people are told.
+    pub mail: Mail,
+}
+
+/// Who and where this is.
+#[derive(Debug, Clone, PartialEq, Eq)]
+pub struct Site {
+    /// The hospital's name, as it stands on messages.
+    pub name: String,
+    /// The zone of times that come without one, and of times that people read.
+    pub zone: Tz,
+    /// Who gives the patient numbers that come without an issuer.
+    pub issuer: String,
+}
+
+/// Where things are.
+#[derive(Debug, Clone, PartialEq, Eq)]
+pub struct Folders {
+    /// Where exports arrive. Never written to.
+    pub export: PathBuf,
+    /// The database and the kept contents.
+    pub store: PathBuf,
+    /// The protocol.
+    pub protocol: PathBuf,
+    /// The medicine list.
+    pub medicines: PathBuf,
+    /// A file that has to be in the export folder: without it the folder is taken for an unmounted one.
+    pub marker: Option<PathBuf>,
+    /// Below this much free space the disk is in trouble, bytes.
+    pub least_free: u64,
+}
+
+/// How files are taken in.
+#[derive(Debug, Clone, PartialEq, Eq)]
+pub struct Intake {
+    /// For how long a file has to stay the same before it is opened.
+    pub settle: Duration,
+    /// How often the folder is looked at when nothing seems to happen.
+    pub scan_every: Duration,
+    /// How long a header waits for the file that it names, and the other way round.
+    pub pair_wait: Duration,
+    /// Larger files are held unread, bytes.
+    pub largest_file: u64,
+    /// Threads that read and measure; `None` for one per core.
+    pub workers: Option<usize>,
+}
+
+/// How people are told.
+#[derive(Debug, Clone, PartialEq, Eq)]
+pub struct Mail {
+    /// The sender's address.
+    pub from: String,
+    /// Whether mail bodies may carry patients' names.
+    pub names: bool,
+    /// Where messages go.
+    pub by: MailBy,
+}
+
+/// Where messages go.
+#[derive(Debug, Clone, PartialEq, Eq)]
+pub enum MailBy {
+    /// To a mail server.
+    Smtp(Smtp),
+    /// Into a folder, one `.eml` file each.
+    Folder(PathBuf),
+    /// Nowhere but this process's memory: for trying things out.
+    Memory,
+}
+
+/// A mail server.
+#[derive(Debug, Clone, PartialEq, Eq)]
+pub struct Smtp {
+    /// Its name, which its certificate has to carry.
+    pub host: String,
+    /// Its port.
+    pub port: u16,
+    /// How the connection is protected.
+    pub tls: Tls,
+    /// Certificates to trust besides the system's, PEM.
+    pub ca_file: Option<PathBuf>,
+    /// How we sign in.
+    pub sign_in: Option<SignIn>,
+}
+
+/// How a connection to a mail server is protected.
+#[derive(Debug, Clone, Copy, PartialEq, Eq)]
+pub enum Tls {
+    /// STARTTLS, and nothing is sent without it.
+    StartTls,
+    /// TLS from the first byte.
+    Wrapped,
+    /// None: only for a server on this machine.
+    Plain,
+}
+
+/// How we sign in to a mail server.
+#[derive(Debug, Clone, PartialEq, Eq)]
+pub struct SignIn {
+    /// The account.
+    pub user: String,
+    /// Its password.
+    pub password: Secret,
+}
+
+/// A text that is never shown.
+#[derive(Clone, PartialEq, Eq)]
+pub struct Secret(String);
+
+impl Secret {
+    /// Hides a text.
+    pub fn new(text: impl Into<String>) -> Self {
+        Self(text.into())
+    }
+
+    /// The text itself, for the one who has to say it.
+    pub fn expose(&self) -> &str {
+        &self.0
+    }
+}
+
+impl fmt::Debug for Secret {
+    fn fmt(&self, f: &mut fmt::Formatter<'_>) -> fmt::Result {
+        f.write_str("(hidden)")
+    }
+}
+
+impl Settings {
+    /// Reads and checks a settings file. Relative paths in it count from the file's own folder.
+    ///
+    /// # Errors
+    /// Everything that is wrong, each with line and column.
+    pub fn read(file: &Path) -> Result<Self, Problems> {
+        let text = std::fs::read_to_string(file).map_err(|error| {
+            let problem = Problem {
+                file: file.to_owned(),
+                place: None,
+                what: format!("can't be read: {error}"),
+                hint: None,
+            };
+            Problems(vec![problem.hint("name another settings file with `--settings`")])
+        })?;
+        check::check(file, &text)
+    }
+
+    /// What reading files depends on.
+    pub fn reading_site(&self) -> ebbmark_formats::Site {
+        ebbmark_formats::Site { zone: self.site.zone, issuer: self.site.issuer.as_str().into() }
+    }
+
+    /// The part of the sender's address after the `@`: the domain of message ids.
+    pub fn mail_domain(&self) -> &str {
+        self.mail.from.rsplit('@').next().unwrap_or("localhost")
+    }
+}
