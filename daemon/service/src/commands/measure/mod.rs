@@ -77,8 +77,11 @@ impl Measure {
                 .collect();
             for (path, result) in &measured {
                 if let Err(unread) = result {
-                    eprintln!("error: {}: {unread}", path.display());
                     ended = Ended::Findings;
+                    // The table says it in its own row.
+                    if self.json {
+                        eprintln!("error: {}: {unread}", path.display());
+                    }
                 }
                 let text = if self.json {
                     line::line(path, result, self.beats)
