@@ -3,6 +3,9 @@
 pub mod alert;
 pub mod correction;
 pub mod decide;
+pub mod electrolytes;
 pub mod fact;
+pub mod finding;
 pub mod ids;
+pub mod medicines;
 pub mod units;
