@@ -64,7 +64,7 @@ pub fn companions(kind: Kind, bytes: &[u8]) -> Result<Vec<String>, Unread> {
 pub fn content(
     kind: Kind,
     bytes: &[u8],
-    beside: &[(String, Vec<u8>)],
+    beside: &[(String, &[u8])],
     site: &Site,
 ) -> Result<Content, Unread> {
     let mut companions = Companions::default();
@@ -87,6 +87,8 @@ pub fn file(path: &Path, site: &Site) -> Result<Content, Unread> {
         let bytes = std::fs::read(folder.join(&name)).map_err(Unread::Companion)?;
         beside.push((name, bytes));
     }
+    let beside: Vec<(String, &[u8])> =
+        beside.iter().map(|(name, bytes)| (name.clone(), bytes.as_slice())).collect();
     content(kind, &bytes, &beside, site)
 }
 

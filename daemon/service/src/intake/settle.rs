@@ -26,6 +26,22 @@ impl Settling {
         Self { still_for, seen: HashMap::new() }
     }
 
+    /// Changes for how long a file has to stay the same.
+    pub fn still_for(&mut self, still_for: Duration) {
+        self.still_for = still_for;
+    }
+
+    /// For how long a file has looked the way it does now; `None` where it is not being waited for.
+    pub fn waited(&self, path: &Path, now: Duration) -> Option<Duration> {
+        self.seen.get(path).map(|look| now.saturating_sub(look.since))
+    }
+
+    /// Whether a file looked like this for long enough; `None` where it is not being waited for.
+    pub fn has_settled(&self, path: &Path, stamp: Stamp, now: Duration) -> Option<bool> {
+        let look = self.seen.get(path)?;
+        Some(look.stamp == stamp && now.saturating_sub(look.since) >= self.still_for)
+    }
+
     /// Looks at a file in pass number `pass`, at `now` on a clock that only runs forward. `true` once it has settled.
     pub fn look(&mut self, path: &Path, stamp: Stamp, now: Duration, pass: u64) -> bool {
         if let Some(look) = self.seen.get_mut(path) {
@@ -60,9 +76,9 @@ impl Settling {
         self.seen.is_empty()
     }
 
-    /// When the first of them can settle at the earliest, on the same clock.
-    pub fn next(&self) -> Option<Duration> {
-        self.seen.values().map(|look| look.since + self.still_for).min()
+    /// When the next of them can settle after `now` at the earliest, on the same clock.
+    pub fn next(&self, now: Duration) -> Option<Duration> {
+        self.seen.values().map(|look| look.since + self.still_for).filter(|&at| at > now).min()
     }
 }
 

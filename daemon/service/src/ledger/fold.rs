@@ -49,6 +49,8 @@ impl Keeper {
                 Body::ProtocolInForce(hash) => _ = self.in_force.insert("protocol", hash.clone()),
                 Body::MedicinesInForce(hash) => _ = self.in_force.insert("medicines", hash.clone()),
                 Body::CodesInForce(hash) => _ = self.in_force.insert("codes", hash.clone()),
+                Body::Service { trouble, present: true } => _ = self.troubles.insert(*trouble),
+                Body::Service { trouble, present: false } => _ = self.troubles.remove(trouble),
                 _ => {}
             }
             self.identities.learn(&fact);
@@ -74,9 +76,7 @@ impl Keeper {
         if found.different > 0 {
             found.caught_up = self.reconcile(&standing)?;
         }
-        let caught_up = self.advance()?;
-        found.caught_up.raised += caught_up.raised;
-        found.caught_up.posted += caught_up.posted;
+        found.caught_up.add(self.advance()?);
         Ok(found)
     }
 

@@ -18,10 +18,10 @@ use crate::store::{
 use ebbmark_formats::BadRow;
 use ebbmark_rules::alert::{Decision, Notice};
 use ebbmark_rules::decide::{Decider, Texts};
-use ebbmark_rules::fact::{At, Body, Description, Fact, Source};
+use ebbmark_rules::fact::{At, Body, Description, Fact, Source, Trouble};
 use ebbmark_rules::ids::{ContentHash, PatientId, Private};
 use identity::Identities;
-use std::collections::BTreeMap;
+use std::collections::{BTreeMap, BTreeSet};
 use std::sync::Arc;
 use std::thread::JoinHandle;
 use tokio::sync::{Notify, mpsc, oneshot, watch};
@@ -59,6 +59,8 @@ pub enum Reading {
     },
     /// Nothing that can be used.
     Held(What, Held),
+    /// Content that was accepted before.
+    Repeat,
 }
 
 /// A file that was read, with the files that belong to it.
@@ -126,6 +128,7 @@ enum Command {
     Files(Vec<Arrival>, Reply<Tally>),
     Learn(Vec<Draft>, Reply<Tally>),
     Force(TextKind, String, Reply<bool>),
+    Trouble(Trouble, bool, Reply<bool>),
     Advance(Reply<Tally>),
     Claim(usize, Reply<Vec<Outgoing>>),
     Settle(i64, Sending, Reply<()>),
@@ -205,6 +208,26 @@ impl Ledger {
         self.ask(|reply| Command::Force(kind, text, reply)).await
     }
 
+    /// Says that something of the service is in trouble or well; `true` where that is news.
+    ///
+    /// # Errors
+    /// The ledger has stopped or stops now.
+    pub async fn trouble(&self, trouble: Trouble, present: bool) -> Result<bool, StoreError> {
+        self.ask(|reply| Command::Trouble(trouble, present, reply)).await
+    }
+
+    /// As [`Ledger::trouble`], for threads outside the async runtime.
+    ///
+    /// # Errors
+    /// The ledger has stopped or stops now.
+    pub fn trouble_blocking(&self, trouble: Trouble, present: bool) -> Result<bool, StoreError> {
+        let (reply, answer) = oneshot::channel();
+        self.commands
+            .blocking_send(Command::Trouble(trouble, present, reply))
+            .map_err(|_| StoreError::Stopped)?;
+        answer.blocking_recv().map_err(|_| StoreError::Stopped)?
+    }
+
     /// Takes the deadlines that are due by now.
     ///
     /// # Errors
@@ -261,6 +284,7 @@ struct Keeper {
     identities: Identities,
     shelf: Shelf,
     in_force: BTreeMap<&'static str, ContentHash>,
+    troubles: BTreeSet<Trouble>,
     domain: String,
     render: Render,
     last: At,
@@ -293,6 +317,7 @@ impl Keeper {
             identities: Identities::default(),
             shelf: Shelf::default(),
             in_force: BTreeMap::new(),
+            troubles: BTreeSet::new(),
             domain,
             render,
             last: At::UNIX_EPOCH,
@@ -311,6 +336,9 @@ impl Keeper {
                 Command::Learn(drafts, reply) => self.answer(reply, |keeper| keeper.learn(drafts)),
                 Command::Force(kind, text, reply) => {
                     self.answer(reply, |keeper| keeper.put_in_force(kind, text))
+                }
+                Command::Trouble(trouble, present, reply) => {
+                    self.answer(reply, |keeper| keeper.trouble(trouble, present))
                 }
                 Command::Advance(reply) => self.answer(reply, Keeper::advance),
                 Command::Claim(limit, reply) => self.answer(reply, |keeper| keeper.claim(limit)),
@@ -422,6 +450,25 @@ impl Keeper {
         Ok(true)
     }
 
+    fn trouble(&mut self, trouble: Trouble, present: bool) -> Result<bool, StoreError> {
+        if self.troubles.contains(&trouble) == present {
+            return Ok(false);
+        }
+        let body = Body::Service { trouble, present };
+        self.learn(vec![Draft {
+            occurred_at: None,
+            source: Source::Service,
+            patient: None,
+            body,
+        }])?;
+        if present {
+            self.troubles.insert(trouble);
+        } else {
+            self.troubles.remove(&trouble);
+        }
+        Ok(true)
+    }
+
     /// One transaction around `work`.
     fn change(
         &mut self,
@@ -449,6 +496,15 @@ impl Keeper {
 }
 
 impl Tally {
+    /// Counts another batch in.
+    pub fn add(&mut self, other: Tally) {
+        self.accepted += other.accepted;
+        self.repeats += other.repeats;
+        self.held += other.held;
+        self.raised += other.raised;
+        self.posted += other.posted;
+    }
+
     fn wake(&self, mail: &Notify) {
         if self.posted > 0 {
             mail.notify_one();
@@ -475,6 +531,7 @@ impl Pen<'_, '_> {
             None => false,
         };
         let (outcome, drafts) = match &arrival.reading {
+            Reading::Repeat => (Outcome::Repeat, [].as_slice()),
             _ if known => (Outcome::Repeat, [].as_slice()),
             Reading::Held(what, reason) => (Outcome::Held(*what, reason.clone()), [].as_slice()),
             Reading::Tracing { described, draft } => {

@@ -88,14 +88,25 @@ impl Reader {
             .map_err(StoreError::sql("look a file up in"))
     }
 
-    /// Files with outcome `held`, and accepted ones with rows that could not be used, oldest first.
+    /// Whether this content was accepted before.
+    pub fn is_accepted(&self, hash: &ContentHash) -> Result<bool, StoreError> {
+        self.connection
+            .prepare_cached("SELECT 1 FROM file WHERE hash = ? AND outcome = 'accepted'")
+            .and_then(|mut query| query.exists([hash.as_str()]))
+            .map_err(StoreError::sql("look a content up in"))
+    }
+
+    /// Files that stand as held, and accepted ones with rows that could not be used, oldest first. A file that was
+    /// exported again under the same name stands as its last version does.
     pub fn held(&self) -> Result<Vec<FileRow>, StoreError> {
         let fail = || StoreError::sql("list held files of");
         let mut query = self
             .connection
             .prepare(
                 "SELECT id, path, size, hash, outcome, what, reason, at_us FROM file
-                 WHERE outcome = 'held' OR id IN (SELECT file FROM bad_row) ORDER BY id",
+                 WHERE (outcome = 'held' OR id IN (SELECT file FROM bad_row))
+                 AND NOT EXISTS (SELECT 1 FROM file AS later WHERE later.path = file.path AND later.id > file.id)
+                 ORDER BY id",
             )
             .map_err(fail())?;
         let mut rows = query

@@ -8,7 +8,7 @@ CREATE TABLE text (
     stored_us INTEGER NOT NULL
 ) STRICT, WITHOUT ROWID;
 
--- One row for each look at a file that ended in an outcome. `path` is relative to the export folder and may not be
+-- One row for each look at a file that ended in an outcome; a path's last row is how it stands. `path` is relative to the export folder and may not be
 -- UTF-8. `version` is the program's: a file held by an older one deserves another look.
 CREATE TABLE file (
     id       INTEGER PRIMARY KEY,
@@ -24,9 +24,9 @@ CREATE TABLE file (
     at_us    INTEGER NOT NULL,
     version  TEXT NOT NULL,
     CHECK ((outcome = 'held') = (reason <> '')),
-    CHECK (outcome = 'held' OR hash IS NOT NULL),
-    UNIQUE (path, size, mtime_ns, ctime_ns, inode, version)
+    CHECK (outcome = 'held' OR hash IS NOT NULL)
 ) STRICT;
+CREATE INDEX file_look ON file (path, size, mtime_ns, ctime_ns, inode);
 CREATE UNIQUE INDEX file_content_accepted_once ON file (hash) WHERE outcome = 'accepted';
 CREATE INDEX file_held ON file (at_us) WHERE outcome = 'held';
 
