@@ -11,5 +11,7 @@ pub mod people;
 pub mod qtc;
 pub mod reading;
 pub mod report;
+pub mod rulebooks;
+pub mod service;
 pub mod settings;
 pub mod store;

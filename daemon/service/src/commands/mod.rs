@@ -1,6 +1,11 @@
 //! The command line: one file a command.
 
+mod alerts;
+mod audit;
+mod check;
+mod held;
 mod measure;
+mod settings;
 
 use clap::{Parser, Subcommand};
 use std::process::ExitCode;
@@ -20,6 +25,10 @@ struct Arguments {
 #[derive(Debug, Subcommand)]
 enum Command {
     Measure(measure::Measure),
+    Check(check::Check),
+    Alerts(alerts::Alerts),
+    Held(held::Held),
+    Audit(audit::Audit),
 }
 
 /// How a command ended; the exit code says it to whoever started it.
@@ -56,8 +65,18 @@ pub fn run() -> ExitCode {
     };
     match arguments.command {
         Command::Measure(measure) => measure.run(),
+        Command::Check(check) => check.run(),
+        Command::Alerts(alerts) => alerts.run(),
+        Command::Held(held) => held.run(),
+        Command::Audit(audit) => audit.run(),
     }
     .into()
+}
+
+/// Says what broke.
+fn broken(error: &dyn std::error::Error) -> Ended {
+    eprintln!("error: {error}");
+    Ended::Broken
 }
 
 /// Writes to standard output; `false` once nobody reads it any more, which ends a command quietly.

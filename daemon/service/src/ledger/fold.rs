@@ -19,6 +19,10 @@ pub struct Folded {
     pub folded: u64,
     /// Places at which the two differ.
     pub different: u64,
+    /// A protocol is in force.
+    pub protocol: bool,
+    /// A medicine list is in force.
+    pub medicines: bool,
     /// Messages that were being sent when the last run ended.
     pub unclaimed: usize,
     /// What catching up led to.
@@ -68,6 +72,8 @@ impl Keeper {
         }
         stored.rest(&reader, &mut found)?;
         drop(reader);
+        found.protocol = self.in_force.contains_key("protocol");
+        found.medicines = self.in_force.contains_key("medicines");
 
         let now = self.now();
         let change = self.store.write(now)?;

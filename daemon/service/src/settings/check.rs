@@ -1,8 +1,8 @@
 //! From the settings as written to checked settings. Gathers everything that is wrong, not only the first thing.
 
-use super::place::{Problem, Problems};
 use super::raw::{self, Raw};
-use super::{Folders, Intake, Mail, MailBy, Secret, Settings, SignIn, Site, Smtp, Tls};
+use super::{Folders, Intake, Mail, MailBy, Problems, Secret, Settings, SignIn, Site, Smtp, Tls};
+use ebbmark_rules::finding::Finding;
 use std::ops::RangeInclusive;
 use std::path::{Path, PathBuf};
 use std::time::Duration;
@@ -25,24 +25,19 @@ const PORT: Bound = Bound { key: "port", range: 1..=65_535, default: 587 };
 
 pub(super) fn check(file: &Path, text: &str) -> Result<Settings, Problems> {
     let raw: Raw = toml::from_str(text).map_err(|error| {
-        let problem = Problem::at(file, text, error.span(), one_line(error.message()));
-        Problems(vec![match similar(error.message()) {
-            Some(hint) => problem.hint(hint),
-            None => problem,
-        }])
+        let finding = Finding::of_toml(text, &error);
+        let finding = match similar(error.message()) {
+            Some(hint) => finding.hint(hint),
+            None => finding,
+        };
+        Problems::of(file, &[finding])
     })?;
-    let mut check =
-        Check { file, text, base: file.parent().unwrap_or(Path::new("")), problems: Vec::new() };
+    let mut check = Check { text, base: file.parent().unwrap_or(Path::new("")), found: Vec::new() };
     let settings = check.settings(raw);
     match settings {
-        Some(settings) if check.problems.is_empty() => Ok(settings),
-        _ => Err(Problems(check.problems)),
+        Some(settings) if check.found.is_empty() => Ok(settings),
+        _ => Err(Problems::of(file, &check.found)),
     }
-}
-
-/// The reader's message in our manner: one line, no full stop.
-fn one_line(message: &str) -> String {
-    message.lines().map(str::trim).collect::<Vec<_>>().join("; ").trim_end_matches('.').to_owned()
 }
 
 /// ``unknown field `setle_ms`, expected one of `settle_ms`, …`` → a hint with the nearest name.
@@ -73,10 +68,9 @@ fn distance(a: &str, b: &str) -> usize {
 }
 
 struct Check<'a> {
-    file: &'a Path,
     text: &'a str,
     base: &'a Path,
-    problems: Vec<Problem>,
+    found: Vec<Finding>,
 }
 
 impl Check<'_> {
@@ -98,11 +92,11 @@ impl Check<'_> {
     }
 
     fn wrong<T>(&mut self, value: &Spanned<T>, what: impl Into<String>) {
-        self.problems.push(Problem::at(self.file, self.text, Some(value.span()), what));
+        self.found.push(Finding::at(self.text, value.span().start, what));
     }
 
     fn wrong_hint<T>(&mut self, value: &Spanned<T>, what: impl Into<String>, hint: &str) {
-        self.problems.push(Problem::at(self.file, self.text, Some(value.span()), what).hint(hint));
+        self.found.push(Finding::at(self.text, value.span().start, what).hint(hint));
     }
 
     fn filled(&mut self, value: &Spanned<String>, key: &str) -> Option<String> {

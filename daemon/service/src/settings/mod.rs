@@ -1,10 +1,10 @@
 //! Settings: `ebbmark.toml` as written, then checked once. Past that point nothing checks them again.
 
 mod check;
-mod place;
+mod problems;
 mod raw;
 
-pub use place::{Problem, Problems};
+pub use problems::Problems;
 
 use chrono_tz::Tz;
 use std::fmt;
@@ -153,13 +153,12 @@ impl Settings {
     /// Everything that is wrong, each with line and column.
     pub fn read(file: &Path) -> Result<Self, Problems> {
         let text = std::fs::read_to_string(file).map_err(|error| {
-            let problem = Problem {
-                file: file.to_owned(),
-                place: None,
-                what: format!("can't be read: {error}"),
-                hint: None,
-            };
-            Problems(vec![problem.hint("name another settings file with `--settings`")])
+            Problems::whole(
+                file,
+                format!(
+                    "can't be read: {error}\n  hint: name another settings file with `--settings`"
+                ),
+            )
         })?;
         check::check(file, &text)
     }

@@ -14,6 +14,7 @@ pub use write::{Held, Outcome, Seen, Stamp, Taken, TextKind, What, Writing};
 
 use ebbmark_rules::fact::At;
 use rusqlite::{Connection, OpenFlags};
+use std::fs::File;
 use std::path::{Path, PathBuf};
 use std::time::Duration;
 
@@ -64,6 +65,12 @@ pub enum StoreError {
         /// The state that was expected.
         expected: &'static str,
     },
+    /// Another process writes to it.
+    #[error("another service runs on the store in {}; stop that one first", folder.display())]
+    Taken {
+        /// The store's folder.
+        folder: PathBuf,
+    },
     /// An earlier failure stopped the writer.
     #[error("the store stopped after an earlier failure; the service has to start again")]
     Stopped,
@@ -107,6 +114,8 @@ impl StorePath {
 #[derive(Debug)]
 pub struct Store {
     connection: Connection,
+    /// Held for as long as this process lives: two deciders on one store would each tell people their own story.
+    _lock: File,
 }
 
 /// How long a statement waits for a lock that only a backup or a foreign tool could hold.
@@ -116,14 +125,15 @@ impl Store {
     /// Opens or makes the store, and brings it to this program's version.
     ///
     /// # Errors
-    /// The folder can't be made, the file is no database, is locked by another writer for longer than ten seconds, or
-    /// comes from a newer program.
+    /// The folder can't be made, another process has the store, the file is no database, or it comes from a newer
+    /// program.
     pub fn open(path: &StorePath) -> Result<Self, StoreError> {
         std::fs::create_dir_all(path.folder()).map_err(|source| StoreError::Io {
             doing: "make the folder",
             path: path.folder().to_owned(),
             source,
         })?;
+        let lock = lock(path.folder())?;
         let flags = OpenFlags::SQLITE_OPEN_READ_WRITE
             | OpenFlags::SQLITE_OPEN_CREATE
             | OpenFlags::SQLITE_OPEN_NO_MUTEX
@@ -141,7 +151,21 @@ impl Store {
             )
             .map_err(StoreError::sql("set up"))?;
         schema::migrate(&mut connection)?;
-        Ok(Self { connection })
+        Ok(Self { connection, _lock: lock })
+    }
+}
+
+fn lock(folder: &Path) -> Result<File, StoreError> {
+    let path = folder.join("lock");
+    let fail = |source| StoreError::Io { doing: "lock", path: path.clone(), source };
+    let file =
+        File::options().write(true).create(true).truncate(false).open(&path).map_err(fail)?;
+    match file.try_lock() {
+        Ok(()) => Ok(file),
+        Err(std::fs::TryLockError::WouldBlock) => {
+            Err(StoreError::Taken { folder: folder.to_owned() })
+        }
+        Err(std::fs::TryLockError::Error(source)) => Err(fail(source)),
     }
 }
 
