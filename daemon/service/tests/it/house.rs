@@ -1,0 +1,125 @@
+//! A house to test in: a folder with settings, an export folder and a store, and a service that may run in it.
+
+use ebbmark::clock::Clock;
+use ebbmark::service::{Service, Setup};
+use ebbmark::settings::Settings;
+use ebbmark::store::{FileRow, Reader, StorePath};
+use std::path::{Path, PathBuf};
+use std::time::{Duration, Instant};
+
+pub(crate) struct House {
+    folder: tempfile::TempDir,
+}
+
+/// Waiting for a state never takes this long unless it never comes.
+const PATIENCE: Duration = Duration::from_secs(60);
+
+impl House {
+    pub(crate) fn new() -> Self {
+        let house = Self { folder: tempfile::tempdir().unwrap() };
+        std::fs::create_dir(house.export()).unwrap();
+        house.write("medicines.toml", MEDICINES);
+        house.write("protocol.toml", "");
+        house.write("ebbmark.toml", SETTINGS);
+        house
+    }
+
+    pub(crate) fn path(&self) -> &Path {
+        self.folder.path()
+    }
+
+    pub(crate) fn export(&self) -> PathBuf {
+        self.path().join("export")
+    }
+
+    pub(crate) fn settings_file(&self) -> PathBuf {
+        self.path().join("ebbmark.toml")
+    }
+
+    pub(crate) fn write(&self, name: &str, text: impl AsRef<[u8]>) {
+        std::fs::write(self.path().join(name), text).unwrap();
+    }
+
+    pub(crate) fn store(&self) -> StorePath {
+        StorePath::new(self.path().join("store"))
+    }
+
+    pub(crate) async fn start(&self) -> Service {
+        Service::start(Setup {
+            settings: Settings::read(&self.settings_file()).unwrap(),
+            settings_file: self.settings_file(),
+            clock: Clock::System,
+            render: Box::new(|notice, _, id| {
+                format!("{id}\n{}\n", notice.alert.evidence.seen).into_bytes()
+            }),
+        })
+        .await
+        .unwrap()
+    }
+
+    /// How many files ended in this outcome.
+    pub(crate) fn count(&self, outcome: &str) -> u64 {
+        Reader::open(&self.store())
+            .and_then(|reader| reader.file_counts())
+            .unwrap()
+            .get(outcome)
+            .copied()
+            .unwrap_or(0)
+    }
+
+    /// Waits until so many files ended in this outcome.
+    pub(crate) fn wait(&self, outcome: &str, count: u64) {
+        let until = Instant::now() + PATIENCE;
+        while self.count(outcome) < count {
+            assert!(
+                Instant::now() < until,
+                "{} of {count} files are {outcome}: {:?}",
+                self.count(outcome),
+                self.held()
+            );
+            std::thread::sleep(Duration::from_millis(20));
+        }
+    }
+
+    /// What is held: names and reasons, by name.
+    pub(crate) fn held(&self) -> Vec<(String, String)> {
+        let held = Reader::open(&self.store()).and_then(|reader| reader.held()).unwrap();
+        let mut held: Vec<_> = held
+            .into_iter()
+            .map(|FileRow { path, reason, .. }| (path.display().to_string(), reason))
+            .collect();
+        held.sort();
+        held
+    }
+}
+
+const SETTINGS: &str = r#"
+[site]
+name = "Saltmere General"
+zone = "Europe/London"
+issuer = "saltmere"
+[folders]
+export = "export"
+store = "store"
+protocol = "protocol.toml"
+medicines = "medicines.toml"
+least_free_mib = 1
+[intake]
+settle_ms = 100
+scan_every_s = 1
+pair_wait_s = 2
+largest_file_mib = 8
+[mail]
+by = "folder"
+from = "ebbmark@saltmere.example"
+folder = { path = "mail" }
+"#;
+
+const MEDICINES: &str = r#"
+[list]
+name = "Saltmere list"
+version = "1"
+approved_by = ""
+[evidence]
+strong = "well documented"
+"#;
