@@ -90,10 +90,8 @@ pub fn read(path: &Path, cap: u64) -> Result<(Vec<u8>, Stamp), NotRead> {
 
 fn stamp(file: &File) -> Result<Stamp, NotRead> {
     let stat = fstat(file).map_err(NotRead::from_errno)?;
-    match FileType::from_raw_mode(stat.st_mode) {
-        FileType::RegularFile => Ok(stamp_of(&stat)),
-        other => Err(NotRead::NotAFile(kind(other))),
-    }
+    let file_type = FileType::from_raw_mode(stat.st_mode);
+    if file_type.is_file() { Ok(stamp_of(&stat)) } else { Err(NotRead::NotAFile(kind(file_type))) }
 }
 
 /// What kind of thing stands where a file should, in words.

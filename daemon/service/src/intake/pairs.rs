@@ -39,11 +39,10 @@ pub(super) fn plan(
         }
         match header(root, &seen.path) {
             Some(header) if settling.waited(&header.path, now).is_some() => {}
-            Some(header) => {
-                if headers.insert(header.path.clone()) {
-                    jobs.push(job(header, Some(seen), None));
-                }
+            Some(header) if headers.insert(header.path.clone()) => {
+                jobs.push(job(header, Some(seen), None))
             }
+            Some(_) => {}
             None if waited >= pair_wait => {
                 let reason = Held(
                     "is a sample file whose header (.hea) has not come; export both".to_owned(),

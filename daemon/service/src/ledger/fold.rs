@@ -1,8 +1,9 @@
 //! The start: folding what is stored, holding the decisions that come out against those that were stored, and catching
 //! up with the deadlines that fell due while the service was down.
 
-use super::{Keeper, Tally};
-use crate::store::{Reader, StoreError, StorePath};
+use super::Tally;
+use super::keeper::Keeper;
+use crate::store::{Reader, StoreError, StorePath, TextKind};
 use ebbmark_rules::alert::{Alert, AlertState, Decision, LifeStep, Notice};
 use ebbmark_rules::fact::{Body, Source, Trouble};
 use ebbmark_rules::ids::AlertId;
@@ -49,15 +50,7 @@ impl Keeper {
         reader.facts(|_, fact| {
             found.facts += 1;
             self.last = self.last.max(fact.received_at);
-            match &fact.body {
-                Body::ProtocolInForce(hash) => _ = self.in_force.insert("protocol", hash.clone()),
-                Body::MedicinesInForce(hash) => _ = self.in_force.insert("medicines", hash.clone()),
-                Body::CodesInForce(hash) => _ = self.in_force.insert("codes", hash.clone()),
-                Body::Service { trouble, present: true } => _ = self.troubles.insert(*trouble),
-                Body::Service { trouble, present: false } => _ = self.troubles.remove(trouble),
-                _ => {}
-            }
-            self.identities.learn(&fact);
+            self.known.learn(&fact);
             for decision in self.decider.take(&fact, &self.shelf) {
                 stored.hold(&reader, &decision, &mut found)?;
                 stand(&mut standing, decision);
@@ -72,8 +65,8 @@ impl Keeper {
         }
         stored.rest(&reader, &mut found)?;
         drop(reader);
-        found.protocol = self.in_force.contains_key("protocol");
-        found.medicines = self.in_force.contains_key("medicines");
+        found.protocol = self.known.in_force(TextKind::Protocol).is_some();
+        found.medicines = self.known.in_force(TextKind::Medicines).is_some();
 
         let now = self.now();
         let change = self.store.write(now)?;

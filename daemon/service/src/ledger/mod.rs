@@ -6,22 +6,22 @@
 //! gives the state that goes with it.
 
 mod fold;
-mod identity;
+mod keeper;
+mod known;
+mod pen;
 
 pub use fold::Folded;
 
 use crate::clock::Clock;
-use crate::store::outbox::{Outgoing, Sending, message_id};
-use crate::store::{
-    Held, Outcome, Seen, Store, StoreError, StorePath, Taken, TextKind, What, Writing,
-};
+use crate::store::outbox::{Outgoing, Sending};
+use crate::store::{Held, Seen, StoreError, StorePath, TextKind, What};
+use chrono::TimeDelta;
 use ebbmark_formats::BadRow;
-use ebbmark_rules::alert::{Decision, Notice};
-use ebbmark_rules::decide::{Decider, Texts};
-use ebbmark_rules::fact::{At, Body, Description, Fact, Source, Trouble};
+use ebbmark_rules::alert::Notice;
+use ebbmark_rules::fact::{At, Body, Description, Feed, Source, Trouble};
 use ebbmark_rules::ids::{ContentHash, PatientId, Private};
-use identity::Identities;
-use std::collections::{BTreeMap, BTreeSet};
+use keeper::Keeper;
+use std::collections::BTreeMap;
 use std::sync::Arc;
 use std::thread::JoinHandle;
 use tokio::sync::{Notify, mpsc, oneshot, watch};
@@ -129,6 +129,7 @@ enum Command {
     Learn(Vec<Draft>, Reply<Tally>),
     Force(TextKind, String, Reply<bool>),
     Trouble(Trouble, bool, Reply<bool>),
+    Feeds(BTreeMap<Feed, TimeDelta>, Reply<Vec<(Feed, bool)>>),
     Advance(Reply<Tally>),
     Claim(usize, Reply<Vec<Outgoing>>),
     Settle(i64, Sending, Reply<()>),
@@ -216,6 +217,17 @@ impl Ledger {
         self.ask(|reply| Command::Trouble(trouble, present, reply)).await
     }
 
+    /// Says which feeds fell silent for longer than they may, and which are heard again; gives those that turned.
+    ///
+    /// # Errors
+    /// The ledger has stopped or stops now.
+    pub async fn feeds(
+        &self,
+        allowed: BTreeMap<Feed, TimeDelta>,
+    ) -> Result<Vec<(Feed, bool)>, StoreError> {
+        self.ask(|reply| Command::Feeds(allowed, reply)).await
+    }
+
     /// As [`Ledger::trouble`], for threads outside the async runtime.
     ///
     /// # Errors
@@ -276,225 +288,6 @@ impl Ledger {
     }
 }
 
-/// The thread's own state.
-struct Keeper {
-    store: Store,
-    clock: Clock,
-    decider: Decider,
-    identities: Identities,
-    shelf: Shelf,
-    in_force: BTreeMap<&'static str, ContentHash>,
-    troubles: BTreeSet<Trouble>,
-    domain: String,
-    render: Render,
-    last: At,
-    due: watch::Sender<Option<At>>,
-    mail: Arc<Notify>,
-}
-
-/// The texts that facts put in force.
-#[derive(Debug, Default)]
-struct Shelf(BTreeMap<ContentHash, String>);
-
-impl Texts for Shelf {
-    fn text(&self, hash: &ContentHash) -> Option<&str> {
-        self.0.get(hash).map(String::as_str)
-    }
-}
-
-impl Keeper {
-    fn open(
-        parts: Parts,
-        due: watch::Sender<Option<At>>,
-        mail: Arc<Notify>,
-    ) -> Result<(Self, Folded), StoreError> {
-        let Parts { path, clock, domain, render } = parts;
-        let store = Store::open(&path)?;
-        let mut keeper = Keeper {
-            store,
-            clock,
-            decider: Decider::new(),
-            identities: Identities::default(),
-            shelf: Shelf::default(),
-            in_force: BTreeMap::new(),
-            troubles: BTreeSet::new(),
-            domain,
-            render,
-            last: At::UNIX_EPOCH,
-            due,
-            mail,
-        };
-        let folded = keeper.fold(&path)?;
-        Ok((keeper, folded))
-    }
-
-    fn run(&mut self, mut inbox: mpsc::Receiver<Command>) {
-        self.publish();
-        while let Some(command) = inbox.blocking_recv() {
-            let goes_on = match command {
-                Command::Files(batch, reply) => self.answer(reply, |keeper| keeper.files(&batch)),
-                Command::Learn(drafts, reply) => self.answer(reply, |keeper| keeper.learn(drafts)),
-                Command::Force(kind, text, reply) => {
-                    self.answer(reply, |keeper| keeper.put_in_force(kind, text))
-                }
-                Command::Trouble(trouble, present, reply) => {
-                    self.answer(reply, |keeper| keeper.trouble(trouble, present))
-                }
-                Command::Advance(reply) => self.answer(reply, Keeper::advance),
-                Command::Claim(limit, reply) => self.answer(reply, |keeper| keeper.claim(limit)),
-                Command::Settle(id, sending, reply) => {
-                    self.answer(reply, |keeper| keeper.settle(id, &sending))
-                }
-                Command::NextMessage(reply) => {
-                    self.answer(reply, |keeper| keeper.store.next_message())
-                }
-            };
-            if !goes_on {
-                return;
-            }
-            self.publish();
-        }
-    }
-
-    /// Does one command. `false` where the store failed and the thread has to end.
-    fn answer<T>(
-        &mut self,
-        reply: Reply<T>,
-        work: impl FnOnce(&mut Self) -> Result<T, StoreError>,
-    ) -> bool {
-        let result = work(self);
-        let goes_on = match &result {
-            Ok(_) | Err(StoreError::NotThere { .. }) => true,
-            Err(error) => {
-                tracing::error!(%error, "the store failed; the service stops so that it can start afresh");
-                false
-            }
-        };
-        // Whoever asked may have gone; what was asked is done either way.
-        let _ = reply.send(result);
-        goes_on
-    }
-
-    fn publish(&mut self) {
-        let next = self.decider.next_due();
-        self.due.send_if_modified(|due| std::mem::replace(due, next) != next);
-    }
-
-    /// Now, never before anything that was learned or decided: the wall clock may have been set back.
-    fn now(&mut self) -> At {
-        self.last = self.last.max(self.clock.now());
-        self.last
-    }
-
-    fn files(&mut self, batch: &[Arrival]) -> Result<Tally, StoreError> {
-        self.change(|pen| batch.iter().try_for_each(|arrival| pen.arrival(arrival)))
-    }
-
-    fn learn(&mut self, drafts: Vec<Draft>) -> Result<Tally, StoreError> {
-        self.change(|pen| drafts.into_iter().try_for_each(|draft| pen.fact(draft, None)))
-    }
-
-    fn advance(&mut self) -> Result<Tally, StoreError> {
-        if self.decider.next_due().is_none_or(|due| due > self.clock.now().max(self.last)) {
-            return Ok(Tally::default());
-        }
-        self.change(|pen| {
-            let decisions = pen.decider.advance(pen.now);
-            pen.decisions(&decisions, None)
-        })
-    }
-
-    fn claim(&mut self, limit: usize) -> Result<Vec<Outgoing>, StoreError> {
-        let now = self.now();
-        let change = self.store.write(now)?;
-        let claimed = change.claim(limit)?;
-        change.commit()?;
-        Ok(claimed)
-    }
-
-    fn settle(&mut self, id: i64, sending: &Sending) -> Result<(), StoreError> {
-        self.change(|pen| {
-            let (alert, step, recipient) = pen.change.settle(id, sending)?;
-            let body = match sending {
-                Sending::Sent { .. } => Body::Told { alert, step, recipient },
-                Sending::Refused { .. } => Body::Refused { alert, step, recipient },
-                Sending::Waiting { .. } => return Ok(()),
-            };
-            pen.fact(
-                Draft { occurred_at: None, source: Source::Service, patient: None, body },
-                None,
-            )
-        })
-        .map(|_| ())
-    }
-
-    fn put_in_force(&mut self, kind: TextKind, text: String) -> Result<bool, StoreError> {
-        let hash = ContentHash::of(text.as_bytes());
-        if self.in_force.get(kind.word()) == Some(&hash) {
-            return Ok(false);
-        }
-        self.shelf.0.insert(hash.clone(), text.clone());
-        self.in_force.insert(kind.word(), hash.clone());
-        let body = match kind {
-            TextKind::Protocol => Body::ProtocolInForce(hash),
-            TextKind::Medicines => Body::MedicinesInForce(hash),
-            TextKind::Codes => Body::CodesInForce(hash),
-        };
-        self.change(|pen| {
-            pen.change.text(kind, &text)?;
-            pen.fact(
-                Draft { occurred_at: None, source: Source::Service, patient: None, body },
-                None,
-            )
-        })?;
-        Ok(true)
-    }
-
-    fn trouble(&mut self, trouble: Trouble, present: bool) -> Result<bool, StoreError> {
-        if self.troubles.contains(&trouble) == present {
-            return Ok(false);
-        }
-        let body = Body::Service { trouble, present };
-        self.learn(vec![Draft {
-            occurred_at: None,
-            source: Source::Service,
-            patient: None,
-            body,
-        }])?;
-        if present {
-            self.troubles.insert(trouble);
-        } else {
-            self.troubles.remove(&trouble);
-        }
-        Ok(true)
-    }
-
-    /// One transaction around `work`.
-    fn change(
-        &mut self,
-        work: impl FnOnce(&mut Pen<'_, '_>) -> Result<(), StoreError>,
-    ) -> Result<Tally, StoreError> {
-        let now = self.now();
-        let Keeper { store, decider, identities, shelf, domain, render, mail, .. } = self;
-        let change = store.write(now)?;
-        let mut pen = Pen {
-            change: &change,
-            now,
-            decider,
-            identities,
-            shelf,
-            domain,
-            render,
-            tally: Tally::default(),
-        };
-        work(&mut pen)?;
-        let tally = pen.tally;
-        change.commit()?;
-        tally.wake(mail);
-        Ok(tally)
-    }
-}
-
 impl Tally {
     /// Counts another batch in.
     pub fn add(&mut self, other: Tally) {
@@ -509,101 +302,5 @@ impl Tally {
         if self.posted > 0 {
             mail.notify_one();
         }
-    }
-}
-
-/// What writes within one transaction.
-struct Pen<'a, 'store> {
-    change: &'a Writing<'store>,
-    now: At,
-    decider: &'a mut Decider,
-    identities: &'a mut Identities,
-    shelf: &'a Shelf,
-    domain: &'a str,
-    render: &'a Render,
-    tally: Tally,
-}
-
-impl Pen<'_, '_> {
-    fn arrival(&mut self, arrival: &Arrival) -> Result<(), StoreError> {
-        let known = match &arrival.hash {
-            Some(hash) => self.change.is_accepted(hash)?,
-            None => false,
-        };
-        let (outcome, drafts) = match &arrival.reading {
-            Reading::Repeat => (Outcome::Repeat, [].as_slice()),
-            _ if known => (Outcome::Repeat, [].as_slice()),
-            Reading::Held(what, reason) => (Outcome::Held(*what, reason.clone()), [].as_slice()),
-            Reading::Tracing { described, draft } => {
-                match self.identities.disagree(draft.patient.as_ref(), described) {
-                    Some(reason) => (Outcome::Held(What::Tracing, reason), [].as_slice()),
-                    None => (
-                        Outcome::Accepted { what: What::Tracing, bad: Vec::new() },
-                        std::slice::from_ref(draft.as_ref()),
-                    ),
-                }
-            }
-            Reading::Chart { drafts, bad } => {
-                (Outcome::Accepted { what: What::Chart, bad: bad.clone() }, drafts.as_slice())
-            }
-        };
-        match &outcome {
-            Outcome::Accepted { .. } => self.tally.accepted += 1,
-            Outcome::Repeat => self.tally.repeats += 1,
-            Outcome::Held(..) => self.tally.held += 1,
-        }
-        for (seen, hash) in &arrival.companions {
-            let outcome = match &outcome {
-                Outcome::Held(what, _) => {
-                    Outcome::Held(*what, Held("belongs to a header that is held".to_owned()))
-                }
-                Outcome::Accepted { .. } | Outcome::Repeat if self.change.is_accepted(hash)? => {
-                    Outcome::Repeat
-                }
-                Outcome::Accepted { .. } | Outcome::Repeat => {
-                    Outcome::Accepted { what: What::Tracing, bad: Vec::new() }
-                }
-            };
-            self.change.file(&Taken { seen: seen.clone(), hash: Some(hash.clone()), outcome })?;
-        }
-        let file = self.change.file(&Taken {
-            seen: arrival.seen.clone(),
-            hash: arrival.hash.clone(),
-            outcome,
-        })?;
-        drafts.iter().try_for_each(|draft| self.fact(draft.clone(), Some(file)))
-    }
-
-    /// Learns one fact and writes what it leads to. A row that says what an earlier row said is not learned again.
-    fn fact(&mut self, draft: Draft, file: Option<i64>) -> Result<(), StoreError> {
-        let Draft { occurred_at, source, patient, body } = draft;
-        let occurred_at = occurred_at.unwrap_or(self.now);
-        let fact = Fact { occurred_at, received_at: self.now, source, patient, body };
-        let Some(seq) = self.change.fact(&fact, file)? else { return Ok(()) };
-        self.identities.learn(&fact);
-        let decisions = self.decider.take(&fact, self.shelf);
-        self.decisions(&decisions, Some(seq))
-    }
-
-    fn decisions(&mut self, decisions: &[Decision], fact: Option<i64>) -> Result<(), StoreError> {
-        for decision in decisions {
-            self.change.decision(decision, fact)?;
-            match decision {
-                Decision::Raised(_) => self.tally.raised += 1,
-                Decision::Tell(notice) => self.post(notice)?,
-                Decision::Changed(_) | Decision::Life { .. } => {}
-            }
-        }
-        Ok(())
-    }
-
-    fn post(&mut self, notice: &Notice) -> Result<(), StoreError> {
-        for recipient in &notice.recipients {
-            let id = message_id(&notice.alert.id, notice.step, recipient, self.domain);
-            let bytes = (self.render)(notice, recipient, &id);
-            self.change.post(notice, recipient, &id, &bytes)?;
-            self.tally.posted += 1;
-        }
-        Ok(())
     }
 }

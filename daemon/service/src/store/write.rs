@@ -366,7 +366,7 @@ impl Writing<'_> {
 }
 
 /// Which kind of text is stored by hash.
-#[derive(Debug, Clone, Copy, PartialEq, Eq)]
+#[derive(Debug, Clone, Copy, PartialEq, Eq, PartialOrd, Ord)]
 pub enum TextKind {
     /// A protocol.
     Protocol,

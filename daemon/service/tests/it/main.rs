@@ -1,5 +1,12 @@
 //! The service as a whole: real folders, a real store, and the real program where a process matters.
 
+#![allow(
+    clippy::unwrap_used,
+    clippy::panic,
+    clippy::indexing_slicing,
+    reason = "a test fails by panicking"
+)]
+
 mod folder;
 mod house;
 mod outbox;

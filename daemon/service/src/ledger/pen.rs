@@ -1,0 +1,110 @@
+//! Writing within one transaction: files, facts, what is decided on them, and who is to be told.
+
+use super::keeper::Shelf;
+use super::known::Known;
+use super::{Arrival, Draft, Reading, Render, Tally};
+use crate::store::outbox::message_id;
+use crate::store::{Held, Outcome, StoreError, Taken, What, Writing};
+use ebbmark_rules::alert::{Decision, Notice};
+use ebbmark_rules::decide::Decider;
+use ebbmark_rules::fact::{At, Fact};
+
+/// What writes within one transaction.
+pub(super) struct Pen<'a, 'store> {
+    pub(super) change: &'a Writing<'store>,
+    pub(super) now: At,
+    pub(super) decider: &'a mut Decider,
+    pub(super) known: &'a mut Known,
+    pub(super) shelf: &'a Shelf,
+    pub(super) domain: &'a str,
+    pub(super) render: &'a Render,
+    pub(super) tally: Tally,
+}
+
+impl Pen<'_, '_> {
+    pub(super) fn arrival(&mut self, arrival: &Arrival) -> Result<(), StoreError> {
+        let known = match &arrival.hash {
+            Some(hash) => self.change.is_accepted(hash)?,
+            None => false,
+        };
+        let (outcome, drafts) = match &arrival.reading {
+            Reading::Repeat => (Outcome::Repeat, [].as_slice()),
+            _ if known => (Outcome::Repeat, [].as_slice()),
+            Reading::Held(what, reason) => (Outcome::Held(*what, reason.clone()), [].as_slice()),
+            Reading::Tracing { described, draft } => {
+                match self.known.disagree(draft.patient.as_ref(), described) {
+                    Some(reason) => (Outcome::Held(What::Tracing, reason), [].as_slice()),
+                    None => (
+                        Outcome::Accepted { what: What::Tracing, bad: Vec::new() },
+                        std::slice::from_ref(draft.as_ref()),
+                    ),
+                }
+            }
+            Reading::Chart { drafts, bad } => {
+                (Outcome::Accepted { what: What::Chart, bad: bad.clone() }, drafts.as_slice())
+            }
+        };
+        match &outcome {
+            Outcome::Accepted { .. } => self.tally.accepted += 1,
+            Outcome::Repeat => self.tally.repeats += 1,
+            Outcome::Held(..) => self.tally.held += 1,
+        }
+        for (seen, hash) in &arrival.companions {
+            let outcome = match &outcome {
+                Outcome::Held(what, _) => {
+                    Outcome::Held(*what, Held("belongs to a header that is held".to_owned()))
+                }
+                Outcome::Accepted { .. } | Outcome::Repeat if self.change.is_accepted(hash)? => {
+                    Outcome::Repeat
+                }
+                Outcome::Accepted { .. } | Outcome::Repeat => {
+                    Outcome::Accepted { what: What::Tracing, bad: Vec::new() }
+                }
+            };
+            self.change.file(&Taken { seen: seen.clone(), hash: Some(hash.clone()), outcome })?;
+        }
+        let file = self.change.file(&Taken {
+            seen: arrival.seen.clone(),
+            hash: arrival.hash.clone(),
+            outcome,
+        })?;
+        drafts.iter().try_for_each(|draft| self.fact(draft.clone(), Some(file)))
+    }
+
+    /// Learns one fact and writes what it leads to. A row that says what an earlier row said is not learned again.
+    pub(super) fn fact(&mut self, draft: Draft, file: Option<i64>) -> Result<(), StoreError> {
+        let Draft { occurred_at, source, patient, body } = draft;
+        let occurred_at = occurred_at.unwrap_or(self.now);
+        let fact = Fact { occurred_at, received_at: self.now, source, patient, body };
+        let Some(seq) = self.change.fact(&fact, file)? else { return Ok(()) };
+        self.known.learn(&fact);
+        let decisions = self.decider.take(&fact, self.shelf);
+        self.decisions(&decisions, Some(seq))
+    }
+
+    pub(super) fn decisions(
+        &mut self,
+        decisions: &[Decision],
+        fact: Option<i64>,
+    ) -> Result<(), StoreError> {
+        for decision in decisions {
+            self.change.decision(decision, fact)?;
+            match decision {
+                Decision::Raised(_) => self.tally.raised += 1,
+                Decision::Tell(notice) => self.post(notice)?,
+                Decision::Changed(_) | Decision::Life { .. } => {}
+            }
+        }
+        Ok(())
+    }
+
+    pub(super) fn post(&mut self, notice: &Notice) -> Result<(), StoreError> {
+        for recipient in &notice.recipients {
+            let id = message_id(&notice.alert.id, notice.step, recipient, self.domain);
+            let bytes = (self.render)(notice, recipient, &id);
+            self.change.post(notice, recipient, &id, &bytes)?;
+            self.tally.posted += 1;
+        }
+        Ok(())
+    }
+}
