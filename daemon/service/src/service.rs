@@ -66,6 +66,7 @@ pub struct Service {
     tasks: TaskTracker,
     /// Phase one: nothing new is taken in, no message is claimed.
     stop: CancellationToken,
+    intake_ended: CancellationToken,
     folded: Folded,
     pulse: Arc<Pulse>,
 }
@@ -142,6 +143,7 @@ impl Service {
         let (settings, settings_out) = watch::channel(Arc::new(settings));
         let (waker, wakes) = wakes();
         let stop = CancellationToken::new();
+        let intake_ended = CancellationToken::new();
         let pulse = Arc::new(Pulse {
             started: Instant::now(),
             last_ms: AtomicU64::new(0),
@@ -154,7 +156,16 @@ impl Service {
             .name("intake".to_owned())
             .spawn({
                 let (stop, pulse) = (stop.clone(), Arc::clone(&pulse));
-                move || intake.run(&wakes, &stop, &|pass| pulse.beat(pass))
+                let ended = intake_ended.clone().drop_guard();
+                move || {
+                    // Cancelled also when this thread panics.
+                    let _ended = ended;
+                    let result = intake.run(&wakes, &stop, &|pass| pulse.beat(pass));
+                    if let Err(error) = &result {
+                        tracing::error!(%error, "the intake stopped");
+                    }
+                    result
+                }
             })
             .map_err(|error| StartError::Threads(error.to_string()))?;
 
@@ -171,6 +182,7 @@ impl Service {
             waker,
             tasks,
             stop,
+            intake_ended,
             folded,
             pulse,
         })
@@ -235,7 +247,10 @@ impl Service {
 
     /// Returns once a part ended by itself, which only happens when the store failed.
     pub async fn failed(&self) {
-        self.ledger.stopped().cancelled().await;
+        tokio::select! {
+            () = self.ledger.stopped().cancelled_owned() => {}
+            () = self.intake_ended.cancelled() => {}
+        }
     }
 
     /// Stops in phases: the intake ends its portion and messages under way are settled; then the ledger closes the

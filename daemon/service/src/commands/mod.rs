@@ -2,6 +2,7 @@
 
 mod alerts;
 mod audit;
+mod backup;
 mod check;
 mod held;
 mod measure;
@@ -29,6 +30,7 @@ enum Command {
     Alerts(alerts::Alerts),
     Held(held::Held),
     Audit(audit::Audit),
+    Backup(backup::Backup),
 }
 
 /// How a command ended; the exit code says it to whoever started it.
@@ -69,6 +71,7 @@ pub fn run() -> ExitCode {
         Command::Alerts(alerts) => alerts.run(),
         Command::Held(held) => held.run(),
         Command::Audit(audit) => audit.run(),
+        Command::Backup(backup) => backup.run(),
     }
     .into()
 }

@@ -2,6 +2,7 @@
 
 use super::known::Known;
 use super::pen::Pen;
+use super::suspects::Suspects;
 use super::{Arrival, Command, Draft, Folded, Parts, Render, Reply, Tally};
 use crate::clock::Clock;
 use crate::store::outbox::{Outgoing, Sending};
@@ -11,6 +12,7 @@ use ebbmark_rules::decide::{Decider, Texts};
 use ebbmark_rules::fact::{At, Body, Feed, Source, Trouble};
 use ebbmark_rules::ids::ContentHash;
 use std::collections::BTreeMap;
+use std::panic::{AssertUnwindSafe, catch_unwind};
 use std::sync::Arc;
 use tokio::sync::{Notify, mpsc, watch};
 
@@ -20,6 +22,7 @@ pub(super) struct Keeper {
     pub(super) clock: Clock,
     pub(super) decider: Decider,
     pub(super) known: Known,
+    suspects: Suspects,
     pub(super) shelf: Shelf,
     pub(super) domain: String,
     pub(super) render: Render,
@@ -51,6 +54,7 @@ impl Keeper {
             clock,
             decider: Decider::new(),
             known: Known::default(),
+            suspects: Suspects::load(path.folder().join("suspects.json")),
             shelf: Shelf::default(),
             domain,
             render,
@@ -66,7 +70,7 @@ impl Keeper {
         self.publish();
         while let Some(command) = inbox.blocking_recv() {
             let goes_on = match command {
-                Command::Files(batch, reply) => self.answer(reply, |keeper| keeper.files(&batch)),
+                Command::Files(batch, reply) => self.answer(reply, |keeper| keeper.files(batch)),
                 Command::Learn(drafts, reply) => self.answer(reply, |keeper| keeper.learn(drafts)),
                 Command::Force(kind, text, reply) => {
                     self.answer(reply, |keeper| keeper.put_in_force(kind, text))
@@ -123,8 +127,32 @@ impl Keeper {
         self.last
     }
 
-    fn files(&mut self, batch: &[Arrival]) -> Result<Tally, StoreError> {
-        self.change(|pen| batch.iter().try_for_each(|arrival| pen.arrival(arrival)))
+    /// Takes a batch in one transaction; files that the ledger failed on before, each in its own.
+    fn files(&mut self, mut batch: Vec<Arrival>) -> Result<Tally, StoreError> {
+        if !self.suspects.any(&batch) {
+            return self.portion(&batch);
+        }
+        let mut tally = Tally::default();
+        for arrival in &mut batch {
+            self.suspects.judge(arrival);
+            tally.add(self.portion(std::slice::from_ref(arrival))?);
+        }
+        self.suspects.clear(&batch)?;
+        Ok(tally)
+    }
+
+    fn portion(&mut self, batch: &[Arrival]) -> Result<Tally, StoreError> {
+        let work = AssertUnwindSafe(|| {
+            self.change(|pen| batch.iter().try_for_each(|arrival| pen.arrival(arrival)))
+        });
+        // What a panic leaves behind is never used again: the ledger stops.
+        let result = catch_unwind(work).unwrap_or(Err(StoreError::Stopped));
+        match &result {
+            Ok(_) => {}
+            Err(error) if error.is_the_disk() => {}
+            Err(_) => self.suspects.blame(batch)?,
+        }
+        result
     }
 
     fn learn(&mut self, drafts: Vec<Draft>) -> Result<Tally, StoreError> {

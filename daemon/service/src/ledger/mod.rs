@@ -9,6 +9,7 @@ mod fold;
 mod keeper;
 mod known;
 mod pen;
+mod suspects;
 
 pub use fold::Folded;
 

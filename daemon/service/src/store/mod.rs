@@ -1,6 +1,7 @@
 //! What is remembered: one SQLite file with one writer, and the original bytes beside it by content hash.
 
 mod audit;
+mod backup;
 mod content;
 pub mod outbox;
 mod read;
@@ -8,6 +9,7 @@ mod schema;
 mod write;
 
 pub use audit::AuditCheck;
+pub use backup::{Copied, backup};
 pub use content::Contents;
 pub use read::{AlertRow, FileRow, Reader};
 pub use write::{Held, Outcome, Seen, Stamp, Taken, TextKind, What, Writing};
@@ -77,6 +79,29 @@ pub enum StoreError {
 }
 
 impl StoreError {
+    /// Whether the disk failed or is full, and not what was to be written.
+    pub fn is_the_disk(&self) -> bool {
+        use rusqlite::ErrorCode as Code;
+        match self {
+            StoreError::Sql { source, .. } => matches!(
+                source.sqlite_error_code(),
+                Some(
+                    Code::DiskFull
+                        | Code::SystemIoFailure
+                        | Code::CannotOpen
+                        | Code::ReadOnly
+                        | Code::DatabaseBusy
+                )
+            ),
+            StoreError::Io { .. } => true,
+            StoreError::FromTheFuture { .. }
+            | StoreError::Row { .. }
+            | StoreError::NotThere { .. }
+            | StoreError::Taken { .. }
+            | StoreError::Stopped => false,
+        }
+    }
+
     fn sql(doing: &'static str) -> impl FnOnce(rusqlite::Error) -> StoreError {
         move |source| StoreError::Sql { doing, source }
     }

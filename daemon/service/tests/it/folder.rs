@@ -108,3 +108,25 @@ async fn file_exported_again_under_its_name_stands_as_its_last_version() {
     assert_eq!(house.held(), [("x.bin".to_owned(), "is empty".to_owned())]);
     service.stop().await.unwrap();
 }
+
+#[tokio::test(flavor = "multi_thread")]
+async fn backup_of_a_running_service_can_be_started_from() {
+    use ebbmark::store::{Reader, StorePath, backup};
+    let house = House::new();
+    fs::write(house.export().join("x.bin"), "first").unwrap();
+    let service = house.start().await;
+    tokio::task::block_in_place(|| house.wait("held", 1));
+    let copy = StorePath::new(house.path().join("copy"));
+    assert_eq!(backup(&house.store(), &copy).unwrap().contents, 1);
+    fs::write(house.export().join("y.bin"), "second").unwrap();
+    tokio::task::block_in_place(|| house.wait("held", 2));
+    let again = backup(&house.store(), &copy).unwrap();
+    assert_eq!((again.contents, again.there), (1, 1));
+    service.stop().await.unwrap();
+
+    let reader = Reader::open(&copy).unwrap();
+    assert_eq!(reader.audit().unwrap(), Reader::open(&house.store()).unwrap().audit().unwrap());
+    for file in reader.held().unwrap() {
+        assert!(copy.contents().get(&file.hash.unwrap()).unwrap().is_some());
+    }
+}
