@@ -40,6 +40,13 @@ impl House {
         std::fs::write(self.path().join(name), text).unwrap();
     }
 
+    /// Changes a line of the settings.
+    pub(crate) fn set(&self, from: &str, to: &str) {
+        let text = std::fs::read_to_string(self.settings_file()).unwrap();
+        assert!(text.contains(from), "{from} stands in the settings");
+        self.write("ebbmark.toml", text.replace(from, to));
+    }
+
     pub(crate) fn store(&self) -> StorePath {
         StorePath::new(self.path().join("store"))
     }

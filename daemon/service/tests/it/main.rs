@@ -10,3 +10,5 @@
 mod folder;
 mod house;
 mod outbox;
+mod program;
+mod storm;

@@ -27,10 +27,10 @@ pub(super) struct Measure {
     #[arg(long, requires = "json")]
     beats: bool,
     /// Measure from this second of each file
-    #[arg(long, value_name = "S", value_parser = second)]
+    #[arg(long, value_name = "S", value_parser = second, allow_negative_numbers = true)]
     from: Option<f64>,
     /// Measure to this second of each file
-    #[arg(long, value_name = "S", value_parser = second)]
+    #[arg(long, value_name = "S", value_parser = second, allow_negative_numbers = true)]
     to: Option<f64>,
     /// Leave the learned reader out, to compare with it
     #[arg(long)]
