@@ -12,8 +12,8 @@ use std::collections::BTreeMap;
 use toml::Spanned;
 use unicode_normalization::UnicodeNormalization;
 
-/// A checked list.
-#[derive(Debug, Clone)]
+/// A checked list. The default one is empty: it recognises nothing.
+#[derive(Debug, Clone, Default)]
 pub struct MedicineList {
     /// Its name.
     pub name: String,

@@ -317,9 +317,9 @@ impl Patient {
             })
     }
 
-    /// Whether a result was ever sent in more than one version.
-    pub fn was_corrected(&self, id: &ResultId) -> bool {
-        self.results.get(id).is_some_and(|versions| versions.len() > 1)
+    /// Whether any version of a result is known.
+    pub fn knows_result(&self, id: &ResultId) -> bool {
+        self.results.contains_key(id)
     }
 
     /// Tracings that stand, oldest first.

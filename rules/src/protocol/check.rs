@@ -20,11 +20,14 @@ pub(super) fn checked(text: &str, file: File) -> Result<Protocol, Vec<Finding>> 
     let mut check = Check { text, wrong: Vec::new() };
     let roles: BTreeSet<String> =
         file.roster.iter().map(|row| row.as_ref().role.as_ref().clone()).collect();
-    let tier_names: Vec<String> = file.tier.iter().map(|tier| tier.as_ref().name.as_ref().clone()).collect();
+    let tier_names: Vec<String> =
+        file.tier.iter().map(|tier| tier.as_ref().name.as_ref().clone()).collect();
     let zone = check.zone(&file.protocol.zone);
     let approved = check.approval(&file);
     let mut shown = vec![file.reading.formula];
-    shown.extend(file.reading.shown.iter().copied().filter(|formula| *formula != file.reading.formula));
+    shown.extend(
+        file.reading.shown.iter().copied().filter(|formula| *formula != file.reading.formula),
+    );
     let wide_qrs_tier = check.tier(&tier_names, &file.wide_qrs.highest_tier);
     let technical = TechnicalTier {
         tier: check.tier(&tier_names, &file.technical.tier),
@@ -32,10 +35,15 @@ pub(super) fn checked(text: &str, file: File) -> Result<Protocol, Vec<Finding>> 
         to_do: file.technical.to_do.clone(),
     };
     if file.technical.tell.is_empty() {
-        check.add(file.technical.tier.span().start, "nobody is told of technical trouble", "technical.tell names at least one role");
+        check.add(
+            file.technical.tier.span().start,
+            "nobody is told of technical trouble",
+            "technical.tell names at least one role",
+        );
     }
     let limits = file.limits;
-    let watch_ids: BTreeSet<String> = file.watch.iter().map(|watch| watch.as_ref().id.as_ref().clone()).collect();
+    let watch_ids: BTreeSet<String> =
+        file.watch.iter().map(|watch| watch.as_ref().id.as_ref().clone()).collect();
     let names = Names { tiers: &tier_names, limits: &limits, watches: &watch_ids };
     let count = file.tier.len();
     let tiers: Vec<Tier> = file
@@ -74,6 +82,11 @@ pub(super) fn checked(text: &str, file: File) -> Result<Protocol, Vec<Finding>> 
         wide_qrs_tier,
         over_read_doubt_ms: file.over_read.doubt_ms.0,
         limits,
+        silent_after: file
+            .feeds
+            .into_iter()
+            .map(|(feed, is)| (feed, minutes(is.silent_after_h.0 * 60.0)))
+            .collect(),
         technical,
         tiers,
         intents: file.intents,
@@ -98,7 +111,11 @@ impl Check<'_> {
 
     fn zone(&mut self, zone: &Spanned<String>) -> chrono_tz::Tz {
         zone.as_ref().parse().unwrap_or_else(|_| {
-            self.add(zone.span().start, format!("`{}` is not a time zone", zone.as_ref()), "write for example \"Europe/London\"");
+            self.add(
+                zone.span().start,
+                format!("`{}` is not a time zone", zone.as_ref()),
+                "write for example \"Europe/London\"",
+            );
             chrono_tz::UTC
         })
     }
@@ -113,16 +130,28 @@ impl Check<'_> {
                     NaiveDate::from_ymd_opt(i32::from(d.year), u32::from(d.month), u32::from(d.day))
                 });
                 if date.is_none() {
-                    self.add(on.span().start, "`approved_on` is not a plain date", "write 2027-01-31");
+                    self.add(
+                        on.span().start,
+                        "`approved_on` is not a plain date",
+                        "write 2027-01-31",
+                    );
                 }
                 date.map(|date| (by.as_ref().clone(), date))
             }
             (Some(by), None) => {
-                self.add(by.span().start, "the protocol is approved without a date", "write `approved_on = 2027-01-31` beside it");
+                self.add(
+                    by.span().start,
+                    "the protocol is approved without a date",
+                    "write `approved_on = 2027-01-31` beside it",
+                );
                 None
             }
             (None, Some(on)) => {
-                self.add(on.span().start, "the protocol has a date of approval and nobody who approved it", "write `approved_by = \"name\"` beside it");
+                self.add(
+                    on.span().start,
+                    "the protocol has a date of approval and nobody who approved it",
+                    "write `approved_by = \"name\"` beside it",
+                );
                 None
             }
         }
@@ -130,7 +159,11 @@ impl Check<'_> {
 
     fn tier(&mut self, tiers: &[String], name: &Spanned<String>) -> usize {
         tiers.iter().position(|tier| tier == name.as_ref()).unwrap_or_else(|| {
-            self.add(name.span().start, format!("there is no tier `{}`", name.as_ref()), format!("tiers are: {}", tiers.join(", ")));
+            self.add(
+                name.span().start,
+                format!("there is no tier `{}`", name.as_ref()),
+                format!("tiers are: {}", tiers.join(", ")),
+            );
             0
         })
     }
@@ -138,14 +171,22 @@ impl Check<'_> {
     fn roles(&mut self, known: &BTreeSet<String>, names: &[Spanned<String>]) -> Vec<Role> {
         for name in names.iter().filter(|name| !known.contains(name.as_ref())) {
             let roles = known.iter().map(String::as_str).collect::<Vec<_>>().join(", ");
-            self.add(name.span().start, format!("no roster entry reaches the role `{}`", name.as_ref()), format!("the roster reaches: {roles}"));
+            self.add(
+                name.span().start,
+                format!("no roster entry reaches the role `{}`", name.as_ref()),
+                format!("the roster reaches: {roles}"),
+            );
         }
         names.iter().map(|name| Role::new(name.as_ref().as_str())).collect()
     }
 
     fn time(&mut self, text: &Spanned<String>) -> NaiveTime {
         NaiveTime::parse_from_str(text.as_ref(), "%H:%M").unwrap_or_else(|_| {
-            self.add(text.span().start, format!("`{}` is not a time of day", text.as_ref()), "write for example \"07:30\"");
+            self.add(
+                text.span().start,
+                format!("`{}` is not a time of day", text.as_ref()),
+                "write for example \"07:30\"",
+            );
             NaiveTime::MIN
         })
     }
@@ -153,37 +194,79 @@ impl Check<'_> {
     fn hours(&mut self, from: &Spanned<String>, to: &Spanned<String>) -> (NaiveTime, NaiveTime) {
         let hours = (self.time(from), self.time(to));
         if hours.0 == hours.1 {
-            self.add(from.span().start, "from and to are the same time, so the hours are empty", "leave both out for always");
+            self.add(
+                from.span().start,
+                "from and to are the same time, so the hours are empty",
+                "leave both out for always",
+            );
         }
         hours
     }
 
-    fn tier_is(&mut self, roles: &BTreeSet<String>, names: &[String], tier: Spanned<TierIs>, rank: usize, highest: bool) -> Tier {
+    fn tier_is(
+        &mut self,
+        roles: &BTreeSet<String>,
+        names: &[String],
+        tier: Spanned<TierIs>,
+        rank: usize,
+        highest: bool,
+    ) -> Tier {
         let at = tier.span().start;
         let tier = tier.into_inner();
         if names.iter().take(rank).any(|name| name == tier.name.as_ref()) {
-            self.add(tier.name.span().start, format!("the tier `{}` stands twice", tier.name.as_ref()), "give each tier a name of its own");
+            self.add(
+                tier.name.span().start,
+                format!("the tier `{}` stands twice", tier.name.as_ref()),
+                "give each tier a name of its own",
+            );
         }
         if tier.to_do.trim().is_empty() {
-            self.add(at, format!("the tier `{}` does not say what to do", tier.name.as_ref()), "write the hospital's own words in `to_do`");
+            self.add(
+                at,
+                format!("the tier `{}` does not say what to do", tier.name.as_ref()),
+                "write the hospital's own words in `to_do`",
+            );
         }
         if tier.answer_within_min.is_some() && tier.then.is_empty() {
-            self.add(at, format!("nobody follows when `{}` is not answered in time", tier.name.as_ref()), "`then` names the roles told next");
+            self.add(
+                at,
+                format!("nobody follows when `{}` is not answered in time", tier.name.as_ref()),
+                "`then` names the roles told next",
+            );
         }
         if tier.answer_within_min.is_some() && tier.tell.is_empty() {
-            self.add(at, format!("`{}` wants an answer and tells nobody", tier.name.as_ref()), "`tell` names the roles told at once");
+            self.add(
+                at,
+                format!("`{}` wants an answer and tells nobody", tier.name.as_ref()),
+                "`tell` names the roles told at once",
+            );
         }
         if tier.answer_within_min.is_none() && !tier.then.is_empty() {
-            self.add(at, format!("`{}` names roles to tell next and no time after which", tier.name.as_ref()), "write `answer_within_min`");
+            self.add(
+                at,
+                format!(
+                    "`{}` names roles to tell next and no time after which",
+                    tier.name.as_ref()
+                ),
+                "write `answer_within_min`",
+            );
         }
         if highest && tier.answer_within_min.is_none() {
-            self.add(at, format!("the highest tier, `{}`, wants no answer", tier.name.as_ref()), "write `answer_within_min` and `then`: an unanswered alert must go on");
+            self.add(
+                at,
+                format!("the highest tier, `{}`, wants no answer", tier.name.as_ref()),
+                "write `answer_within_min` and `then`: an unanswered alert must go on",
+            );
         }
         let quiet = tier.quiet.map(|quiet| {
             let at = quiet.span().start;
             let QuietIs { from, to } = quiet.into_inner();
             if highest {
-                self.add(at, format!("the highest tier, `{}`, may not wait", tier.name.as_ref()), "leave `quiet` out of it");
+                self.add(
+                    at,
+                    format!("the highest tier, `{}`, may not wait", tier.name.as_ref()),
+                    "leave `quiet` out of it",
+                );
             }
             self.hours(&from, &to)
         });
@@ -204,17 +287,32 @@ impl Check<'_> {
             (Some(from), Some(to)) => Some(self.hours(from, to)),
             (None, None) => None,
             _ => {
-                self.add(at, "a roster entry has one end of its hours", "write both `from` and `to`, or neither for always");
+                self.add(
+                    at,
+                    "a roster entry has one end of its hours",
+                    "write both `from` and `to`, or neither for always",
+                );
                 None
             }
         };
         if row.mail.is_empty() {
-            self.add(at, format!("the roster entry of `{}` has no address", row.role.as_ref()), "`mail` names at least one");
+            self.add(
+                at,
+                format!("the roster entry of `{}` has no address", row.role.as_ref()),
+                "`mail` names at least one",
+            );
         }
         for mail in &row.mail {
-            let plain = mail.as_ref().split_once('@').is_some_and(|(who, host)| !who.is_empty() && host.contains('.'));
+            let plain = mail
+                .as_ref()
+                .split_once('@')
+                .is_some_and(|(who, host)| !who.is_empty() && host.contains('.'));
             if !plain || mail.as_ref().chars().any(char::is_whitespace) {
-                self.add(mail.span().start, "this is not a mail address", "write for example \"tern-nurse@saltmarsh.example\"");
+                self.add(
+                    mail.span().start,
+                    "this is not a mail address",
+                    "write for example \"tern-nurse@saltmarsh.example\"",
+                );
             }
         }
         RosterEntry {
@@ -226,19 +324,37 @@ impl Check<'_> {
     }
 
     /// Every role that is told must be reached on a ward that the roster doesn't name, at every quarter of an hour.
-    fn always_reached(&mut self, tiers: &[Tier], technical: &TechnicalTier, roster: &[RosterEntry]) {
-        let told: BTreeSet<&Role> =
-            tiers.iter().flat_map(|tier| tier.tell.iter().chain(&tier.then)).chain(&technical.tell).collect();
+    fn always_reached(
+        &mut self,
+        tiers: &[Tier],
+        technical: &TechnicalTier,
+        roster: &[RosterEntry],
+    ) {
+        let told: BTreeSet<&Role> = tiers
+            .iter()
+            .flat_map(|tier| tier.tell.iter().chain(&tier.then))
+            .chain(&technical.tell)
+            .collect();
         for role in told {
-            let entries: Vec<_> = roster.iter().filter(|entry| entry.role == *role && entry.wards.is_empty()).collect();
-            let gap = (0..96).filter_map(|quarter| NaiveTime::from_hms_opt(quarter / 4, quarter % 4 * 15, 0)).find(|time| {
-                !entries.iter().any(|entry| entry.hours.is_none_or(|hours| within(hours, *time)))
-            });
+            let entries: Vec<_> = roster
+                .iter()
+                .filter(|entry| entry.role == *role && entry.wards.is_empty())
+                .collect();
+            let gap = (0..96)
+                .filter_map(|quarter| NaiveTime::from_hms_opt(quarter / 4, quarter % 4 * 15, 0))
+                .find(|time| {
+                    !entries
+                        .iter()
+                        .any(|entry| entry.hours.is_none_or(|hours| within(hours, *time)))
+                });
             if let Some(time) = gap.filter(|_| roster.iter().any(|entry| entry.role == *role)) {
                 let at = self.text.find("[[roster]]").unwrap_or(0);
                 self.add(
                     at,
-                    format!("at {} nobody is reached as `{role}` on a ward without an entry of its own", time.format("%H:%M")),
+                    format!(
+                        "at {} nobody is reached as `{role}` on a ward without an entry of its own",
+                        time.format("%H:%M")
+                    ),
                     "add a [[roster]] entry for the role without `wards`, `from` and `to`",
                 );
             }
@@ -249,7 +365,11 @@ impl Check<'_> {
         let at = watch.span().start;
         let watch = watch.into_inner();
         if !seen.insert(watch.id.as_ref().clone()) {
-            self.add(watch.id.span().start, format!("the watch `{}` stands twice", watch.id.as_ref()), "give each watch an id of its own");
+            self.add(
+                watch.id.span().start,
+                format!("the watch `{}` stands twice", watch.id.as_ref()),
+                "give each watch an id of its own",
+            );
         }
         let asks = watch.before_first_dose_within_h.is_some()
             || !watch.after_start_h.is_empty()
@@ -258,9 +378,14 @@ impl Check<'_> {
             || watch.at_steady_state
             || watch.then_every_h.is_some();
         if !asks {
-            self.add(at, format!("the watch `{}` says no time at which it asks", watch.id.as_ref()), "write for example `after_start_h = [24]`");
+            self.add(
+                at,
+                format!("the watch `{}` says no time at which it asks", watch.id.as_ref()),
+                "write for example `after_start_h = [24]`",
+            );
         }
-        let plain = |names: Vec<Spanned<String>>| names.into_iter().map(Spanned::into_inner).collect();
+        let plain =
+            |names: Vec<Spanned<String>>| names.into_iter().map(Spanned::into_inner).collect();
         let hours = |h: super::condition::Positive| minutes(h.0 * 60.0);
         Watch {
             id: watch.id.into_inner(),
@@ -278,17 +403,34 @@ impl Check<'_> {
         }
     }
 
-    fn rule(&mut self, names: &Names<'_>, seen: &mut BTreeSet<String>, rule: Spanned<RuleIs>) -> Rule {
+    fn rule(
+        &mut self,
+        names: &Names<'_>,
+        seen: &mut BTreeSet<String>,
+        rule: Spanned<RuleIs>,
+    ) -> Rule {
         let at = rule.span().start;
         let rule = rule.into_inner();
         if !seen.insert(rule.id.as_ref().clone()) {
-            self.add(rule.id.span().start, format!("the rule `{}` stands twice", rule.id.as_ref()), "give each rule an id of its own");
+            self.add(
+                rule.id.span().start,
+                format!("the rule `{}` stands twice", rule.id.as_ref()),
+                "give each rule an id of its own",
+            );
         }
         if rule.example.is_empty() {
-            self.add(at, format!("the rule `{}` has no example", rule.id.as_ref()), "write a [[rule.example]] that fires and one that stays quiet");
+            self.add(
+                at,
+                format!("the rule `{}` has no example", rule.id.as_ref()),
+                "write a [[rule.example]] that fires and one that stays quiet",
+            );
         }
         if rule.says.trim().is_empty() {
-            self.add(at, format!("the rule `{}` does not say what was seen", rule.id.as_ref()), "write a sentence in `says`");
+            self.add(
+                at,
+                format!("the rule `{}` does not say what was seen", rule.id.as_ref()),
+                "write a sentence in `says`",
+            );
         }
         for text in [Some(&rule.says), rule.to_do.as_ref()].into_iter().flatten() {
             self.wording(at, text);
@@ -299,8 +441,14 @@ impl Check<'_> {
         self.condition(names, at, &rule.when);
         Rule {
             tier: self.tier(names.tiers, &rule.tier),
-            borderline: rule.borderline.as_ref().and_then(|name| self.tier_or_shown(names.tiers, name)),
-            cannot_tell: rule.cannot_tell.as_ref().and_then(|name| self.tier_or_shown(names.tiers, name)),
+            borderline: rule
+                .borderline
+                .as_ref()
+                .and_then(|name| self.tier_or_shown(names.tiers, name)),
+            cannot_tell: rule
+                .cannot_tell
+                .as_ref()
+                .and_then(|name| self.tier_or_shown(names.tiers, name)),
             id: RuleId::new(rule.id.into_inner()),
             concern: rule.concern.into_inner(),
             says: rule.says,
@@ -329,7 +477,11 @@ impl Check<'_> {
         match condition {
             Condition::All(of) | Condition::Any(of) | Condition::None(of) => {
                 if of.is_empty() {
-                    self.add(at, "an empty list of conditions decides nothing", "name at least one condition, or leave it out");
+                    self.add(
+                        at,
+                        "an empty list of conditions decides nothing",
+                        "name at least one condition, or leave it out",
+                    );
                 }
                 for part in of {
                     self.condition(names, at, part);
@@ -338,7 +490,14 @@ impl Check<'_> {
             Condition::AtLeast(few) => {
                 let n = *few.n.as_ref();
                 if n == 0 || n > few.of.len() {
-                    self.add(few.n.span().start, format!("at least {n} of {} conditions is always or never so", few.of.len()), "n lies between 1 and the number of conditions");
+                    self.add(
+                        few.n.span().start,
+                        format!(
+                            "at least {n} of {} conditions is always or never so",
+                            few.of.len()
+                        ),
+                        "n lies between 1 and the number of conditions",
+                    );
                 }
                 for part in &few.of {
                     self.condition(names, at, part);
@@ -346,13 +505,22 @@ impl Check<'_> {
             }
             Condition::Qtc(qtc) => self.qtc(names, at, qtc),
             Condition::FormulasSplit(limit) => self.limit(names, at, limit),
-            Condition::Rate(rate) if rate.below_per_min.is_none() && rate.above_per_min.is_none() => {
+            Condition::Rate(rate)
+                if rate.below_per_min.is_none() && rate.above_per_min.is_none() =>
+            {
                 self.add(at, "`rate` asks nothing", "write `below_per_min` or `above_per_min`");
             }
             Condition::Electrolyte(is) => {
-                let asked = [is.below_mmol_l, is.above_mmol_l, is.falling_by_mmol_l].into_iter().flatten().count();
+                let asked = [is.below_mmol_l, is.above_mmol_l, is.falling_by_mmol_l]
+                    .into_iter()
+                    .flatten()
+                    .count();
                 if asked != 1 {
-                    self.add(at, "`electrolyte` asks one thing", "write one of `below_mmol_l`, `above_mmol_l`, `falling_by_mmol_l`");
+                    self.add(
+                        at,
+                        "`electrolyte` asks one thing",
+                        "write one of `below_mmol_l`, `above_mmol_l`, `falling_by_mmol_l`",
+                    );
                 }
                 if is.falling_by_mmol_l.is_some() != is.within_h.is_some() {
                     self.add(at, "`falling_by_mmol_l` and `within_h` go together", "write both");
@@ -360,7 +528,11 @@ impl Check<'_> {
             }
             Condition::Overdue(overdue) if !names.watches.contains(overdue.watch.as_ref()) => {
                 let known = names.watches.iter().map(String::as_str).collect::<Vec<_>>().join(", ");
-                self.add(overdue.watch.span().start, format!("there is no watch `{}`", overdue.watch.as_ref()), format!("watches are: {known}"));
+                self.add(
+                    overdue.watch.span().start,
+                    format!("there is no watch `{}`", overdue.watch.as_ref()),
+                    format!("watches are: {known}"),
+                );
             }
             Condition::Medicines(medicines) if medicines.at_least == 0 => {
                 self.add(at, "at least 0 medicines is always so", "write 1 or more");
@@ -370,16 +542,26 @@ impl Check<'_> {
     }
 
     fn qtc(&mut self, names: &Names<'_>, at: usize, qtc: &QtcIs) {
-        let asked = usize::from(qtc.at_least_ms.is_some()) + usize::from(qtc.at_least.is_some()) + usize::from(qtc.below_ms.is_some());
+        let asked = usize::from(qtc.at_least_ms.is_some())
+            + usize::from(qtc.at_least.is_some())
+            + usize::from(qtc.below_ms.is_some());
         if asked != 1 {
-            self.add(at, "`qtc` asks one thing", "write one of `at_least_ms`, `at_least`, `below_ms`");
+            self.add(
+                at,
+                "`qtc` asks one thing",
+                "write one of `at_least_ms`, `at_least`, `below_ms`",
+            );
         }
         self.limit_name(names, qtc.at_least.as_ref());
     }
 
     fn limit(&mut self, names: &Names<'_>, at: usize, limit: &Limit) {
         if limit.at_least_ms.is_some() == limit.at_least.is_some() {
-            self.add(at, "`formulas_split` needs one limit", "write one of `at_least_ms`, `at_least`");
+            self.add(
+                at,
+                "`formulas_split` needs one limit",
+                "write one of `at_least_ms`, `at_least`",
+            );
         }
         self.limit_name(names, limit.at_least.as_ref());
     }
@@ -387,7 +569,11 @@ impl Check<'_> {
     fn limit_name(&mut self, names: &Names<'_>, name: Option<&Spanned<String>>) {
         if let Some(name) = name.filter(|name| !names.limits.contains_key(name.as_ref())) {
             let known = names.limits.keys().map(String::as_str).collect::<Vec<_>>().join(", ");
-            self.add(name.span().start, format!("there is no limit `{}`", name.as_ref()), format!("[limits] names: {known}"));
+            self.add(
+                name.span().start,
+                format!("there is no limit `{}`", name.as_ref()),
+                format!("[limits] names: {known}"),
+            );
         }
     }
 }

@@ -79,7 +79,11 @@ pub struct IntervalMs(pub f64);
 impl TryFrom<f64> for IntervalMs {
     type Error = String;
     fn try_from(ms: f64) -> Result<Self, String> {
-        if (200.0..=900.0).contains(&ms) { Ok(Self(ms)) } else { Err(format!("{ms} is no QT interval; 200 to 900 ms can be asked for")) }
+        if (200.0..=900.0).contains(&ms) {
+            Ok(Self(ms))
+        } else {
+            Err(format!("{ms} is no QT interval; 200 to 900 ms can be asked for"))
+        }
     }
 }
 
@@ -91,7 +95,11 @@ pub struct Positive(pub f64);
 impl TryFrom<f64> for Positive {
     type Error = String;
     fn try_from(number: f64) -> Result<Self, String> {
-        if number.is_finite() && number > 0.0 { Ok(Self(number)) } else { Err(format!("{number} is not above 0")) }
+        if number.is_finite() && number > 0.0 {
+            Ok(Self(number))
+        } else {
+            Err(format!("{number} is not above 0"))
+        }
     }
 }
 
@@ -270,6 +278,18 @@ pub enum Of {
     CalciumCorrected,
     /// Ionised calcium.
     CalciumIonised,
+}
+
+impl Of {
+    /// The analyte whose specimens it rests on.
+    pub fn analyte(self) -> fact::Analyte {
+        match self {
+            Of::Potassium => fact::Analyte::Potassium,
+            Of::Magnesium => fact::Analyte::Magnesium,
+            Of::CalciumCorrected => fact::Analyte::CalciumTotal,
+            Of::CalciumIonised => fact::Analyte::CalciumIonised,
+        }
+    }
 }
 
 /// `electrolyte = { of = "potassium", below_mmol_l = 3.5 }`.

@@ -19,6 +19,8 @@ pub(super) struct File {
     pub results: ResultsAre,
     pub wide_qrs: WideQrs,
     pub over_read: OverReadIs,
+    #[serde(default)]
+    pub feeds: BTreeMap<crate::fact::Feed, FeedIs>,
     pub technical: Technical,
     pub tier: Vec<Spanned<TierIs>>,
     #[serde(default)]
@@ -113,6 +115,12 @@ pub(super) struct WideQrs {
 #[serde(deny_unknown_fields)]
 pub(super) struct OverReadIs {
     pub doubt_ms: Positive,
+}
+
+#[derive(Debug, Deserialize)]
+#[serde(deny_unknown_fields)]
+pub(super) struct FeedIs {
+    pub silent_after_h: Positive,
 }
 
 #[derive(Debug, Deserialize)]

@@ -51,6 +51,8 @@ pub struct Protocol {
     pub wide_qrs_tier: usize,
     /// Doubt of an over-read, ms.
     pub over_read_doubt_ms: f64,
+    /// A feed from which nothing came for this long is silent; one that is not named may be.
+    pub silent_after: BTreeMap<crate::fact::Feed, TimeDelta>,
     /// How technical trouble is told.
     pub technical: TechnicalTier,
     /// Tiers, lowest first.
@@ -191,16 +193,23 @@ impl Protocol {
     /// # Errors
     /// Every mistake found, each with its place.
     pub fn parse(text: &str) -> Result<Self, Vec<Finding>> {
-        let file: file::File = toml::from_str(text).map_err(|error| vec![Finding::of_toml(text, &error)])?;
+        let file: file::File =
+            toml::from_str(text).map_err(|error| vec![Finding::of_toml(text, &error)])?;
         check::checked(text, file)
     }
 
     /// The addresses of a role for a ward at a moment, each once, in the file's order.
-    pub fn recipients(&self, role: &Role, ward: Option<&Ward>, at: crate::fact::At) -> Vec<Private> {
+    pub fn recipients(
+        &self,
+        role: &Role,
+        ward: Option<&Ward>,
+        at: crate::fact::At,
+    ) -> Vec<Private> {
         let time = at.with_timezone(&self.zone).time();
         let mut found: Vec<Private> = Vec::new();
         for entry in self.roster.iter().filter(|entry| entry.role == *role) {
-            let here = entry.wards.is_empty() || ward.is_some_and(|ward| entry.wards.contains(ward));
+            let here =
+                entry.wards.is_empty() || ward.is_some_and(|ward| entry.wards.contains(ward));
             if here && entry.hours.is_none_or(|hours| within(hours, time)) {
                 for mail in &entry.mail {
                     if !found.contains(mail) {

@@ -1,0 +1,457 @@
+//! An alert's life: raised, told, acknowledged or escalated, closed or withdrawn. All times are stored deadlines, each
+//! taken as of its due time.
+
+use super::{Decider, Due, Key, Settled};
+use crate::alert::{Alert, AlertState, Decision, Evidence, LifeStep, Notice, NoticeReason};
+use crate::evidence;
+use crate::fact::At;
+use crate::ids::{AlertId, ContentHash, PatientId, Person, Private, Role, RuleId, Ward};
+use crate::protocol::{Protocol, within};
+use crate::verdict::Basis;
+use chrono::{NaiveTime, TimeDelta};
+use std::collections::BTreeSet;
+
+/// An alert that is open or acknowledged.
+#[derive(Debug, Clone)]
+pub(super) struct OpenAlert {
+    pub alert: Alert,
+    pub rank: usize,
+    pub rests_on: BTreeSet<Basis>,
+    /// What it says, apart from ages that change by themselves: the same again is not worth a word.
+    pub signature: Signature,
+    pub ward: Option<Ward>,
+    /// Notices so far.
+    steps: u32,
+    /// Next in the tier's `then`.
+    escalations: u32,
+    /// When the next role is told, a snooze ends or quiet hours end.
+    deadline: Option<(At, Awaits)>,
+    told: Vec<(Role, Vec<Private>)>,
+}
+
+/// What would be a change worth storing.
+#[derive(Debug, Clone, PartialEq)]
+pub(super) struct Signature {
+    pub rule: RuleId,
+    pub rank: usize,
+    pub borderline: bool,
+    pub certain: bool,
+    pub rests_on: BTreeSet<Basis>,
+}
+
+#[derive(Debug, Clone, PartialEq)]
+enum Awaits {
+    Answer,
+    SnoozeEnd,
+    QuietEnd(Vec<Role>, NoticeReason),
+}
+
+/// What is to be raised or changed.
+pub(super) struct Outcome {
+    pub rank: usize,
+    pub signature: Signature,
+    pub evidence: Evidence,
+    pub ward: Option<Ward>,
+}
+
+impl Decider {
+    fn alert_id(&self, key: &Key, at: At) -> AlertId {
+        let (issuer, number) =
+            key.0.as_ref().map_or(("", ""), |patient| (patient.issuer(), patient.expose()));
+        let mut turn = 0;
+        loop {
+            // A second alert for the same concern at the same moment (withdrawn and raised again) gets the next turn.
+            let text =
+                format!("{issuer}\u{0}{number}\u{0}{}\u{0}{}\u{0}{turn}", key.1, at.to_rfc3339());
+            let id = AlertId::new(ContentHash::of(text.as_bytes()).short());
+            if !self.by_id.contains_key(&id) {
+                return id;
+            }
+            turn += 1;
+        }
+    }
+
+    /// Opens an alert and tells whom the tier names.
+    pub(super) fn raise(
+        &mut self,
+        key: Key,
+        outcome: Outcome,
+        tell: Option<Vec<Role>>,
+        at: At,
+        out: &mut Vec<Decision>,
+    ) {
+        let Some(protocol) = self.protocol.clone() else { return };
+        let Some(tier) = protocol.tiers.get(outcome.rank) else { return };
+        let alert = Alert {
+            id: self.alert_id(&key, at),
+            patient: key.0.clone(),
+            concern: key.1.as_str().into(),
+            raised_at: at,
+            as_of: at,
+            state: AlertState::Open,
+            tier: tier.name.clone(),
+            tier_rank: u32::try_from(outcome.rank).unwrap_or(u32::MAX),
+            rule: outcome.signature.rule.clone(),
+            evidence: outcome.evidence,
+        };
+        out.push(Decision::Raised(Box::new(alert.clone())));
+        self.by_id.insert(alert.id.clone(), key.clone());
+        let mut open = OpenAlert {
+            alert,
+            rank: outcome.rank,
+            rests_on: outcome.signature.rests_on.clone(),
+            signature: outcome.signature,
+            ward: outcome.ward,
+            steps: 0,
+            escalations: 0,
+            deadline: None,
+            told: Vec::new(),
+        };
+        let roles = tell.unwrap_or_else(|| tier.tell.clone());
+        open.tell(&protocol, roles, NoticeReason::Raised, at, out);
+        self.keep(key, open);
+    }
+
+    /// Gives an open alert its newer evidence; a risen tier is told anew.
+    pub(super) fn change(&mut self, key: &Key, outcome: Outcome, at: At, out: &mut Vec<Decision>) {
+        let Some(protocol) = self.protocol.clone() else { return };
+        let Some(mut open) = self.open.remove(key) else { return };
+        self.forget_deadline(&open);
+        let rose = outcome.rank > open.rank;
+        let fell = outcome.rank < open.rank;
+        let changed = outcome.signature != open.signature;
+        open.alert.evidence = outcome.evidence;
+        open.alert.as_of = at;
+        open.alert.rule = outcome.signature.rule.clone();
+        open.rests_on.clone_from(&outcome.signature.rests_on);
+        open.signature = outcome.signature;
+        open.ward = outcome.ward.or(open.ward);
+        open.rank = outcome.rank;
+        if let Some(tier) = protocol.tiers.get(outcome.rank) {
+            open.alert.tier = tier.name.clone();
+            open.alert.tier_rank = u32::try_from(outcome.rank).unwrap_or(u32::MAX);
+            if rose {
+                open.alert.state = AlertState::Open;
+                open.escalations = 0;
+                open.deadline = None;
+                out.push(Decision::Changed(Box::new(open.alert.clone())));
+                open.tell(&protocol, tier.tell.clone(), NoticeReason::TierRaised, at, out);
+            } else if changed {
+                if fell && matches!(open.deadline, Some((_, Awaits::Answer))) {
+                    open.deadline = tier.answer_within.map(|within| (at + within, Awaits::Answer));
+                }
+                out.push(Decision::Changed(Box::new(open.alert.clone())));
+            }
+        }
+        self.keep(key.clone(), open);
+    }
+
+    /// Ends an alert because facts say so. Those who were told are told of a withdrawal, and of the end of an alert of
+    /// the highest tier.
+    pub(super) fn end(
+        &mut self,
+        key: &Key,
+        withdrawn: bool,
+        because: &str,
+        at: At,
+        out: &mut Vec<Decision>,
+    ) {
+        let Some(protocol) = self.protocol.clone() else { return };
+        let Some(mut open) = self.open.remove(key) else { return };
+        self.forget_deadline(&open);
+        open.alert.state = if withdrawn { AlertState::Withdrawn } else { AlertState::Closed };
+        open.alert.as_of = at;
+        let step = if withdrawn {
+            LifeStep::Withdrawn { because: because.into() }
+        } else {
+            LifeStep::ClosedByFacts { because: because.into() }
+        };
+        open.life(at, step, out);
+        let highest = open.rank + 1 == protocol.tiers.len();
+        if withdrawn || highest {
+            let reason = if withdrawn { NoticeReason::Withdrawn } else { NoticeReason::Closed };
+            for (role, recipients) in std::mem::take(&mut open.told) {
+                open.notice(role, recipients, reason.clone(), None, at, out);
+            }
+        }
+    }
+
+    /// Ends everything open about a patient.
+    pub(super) fn close_all(
+        &mut self,
+        patient: &PatientId,
+        because: &str,
+        at: At,
+        out: &mut Vec<Decision>,
+    ) {
+        let keys: Vec<Key> = self
+            .open
+            .keys()
+            .filter(|(whose, _)| whose.as_ref() == Some(patient))
+            .cloned()
+            .collect();
+        for key in keys {
+            self.end(&key, false, because, at, out);
+        }
+        self.settled.retain(|(whose, _), _| whose.as_ref() != Some(patient));
+    }
+
+    /// Opens technical trouble, unless it is open.
+    pub(super) fn technical(
+        &mut self,
+        concern: &str,
+        what: &str,
+        because: &str,
+        at: At,
+        out: &mut Vec<Decision>,
+    ) {
+        let key: Key = (None, concern.to_owned());
+        let Some(protocol) = self.protocol.clone() else { return };
+        if self.open.contains_key(&key) {
+            return;
+        }
+        let signature = Signature {
+            rule: RuleId::new("technical"),
+            rank: protocol.technical.tier,
+            borderline: false,
+            certain: true,
+            rests_on: BTreeSet::new(),
+        };
+        let evidence = evidence::technical(&protocol, what, because);
+        let outcome = Outcome { rank: protocol.technical.tier, signature, evidence, ward: None };
+        self.raise(key, outcome, Some(protocol.technical.tell.clone()), at, out);
+    }
+
+    /// Ends technical trouble, if it is open.
+    pub(super) fn technical_over(
+        &mut self,
+        concern: &str,
+        because: &str,
+        at: At,
+        out: &mut Vec<Decision>,
+    ) {
+        self.end(&(None, concern.to_owned()), false, because, at, out);
+    }
+
+    /// Runs something on the alert that a fact names; one that is over stays over.
+    fn with(&mut self, id: &AlertId, act: impl FnOnce(&mut OpenAlert, &Protocol)) {
+        let (Some(protocol), Some(key)) = (self.protocol.clone(), self.by_id.get(id).cloned())
+        else {
+            return;
+        };
+        let current = self.open.get(&key).is_some_and(|open| open.alert.id == *id);
+        if let Some(mut open) = current.then(|| self.open.remove(&key)).flatten() {
+            self.forget_deadline(&open);
+            act(&mut open, &protocol);
+            self.keep(key, open);
+        }
+    }
+
+    pub(super) fn told(
+        &mut self,
+        id: &AlertId,
+        recipient: &Private,
+        at: At,
+        out: &mut Vec<Decision>,
+    ) {
+        self.with(id, |open, _| {
+            open.life(at, LifeStep::Told { recipient: recipient.clone() }, out)
+        });
+        self.technical_over("refused recipient", "a message was taken again", at, out);
+    }
+
+    /// A recipient who can never be reached is as good as one who doesn't answer: the next role is told at once.
+    pub(super) fn unreachable(
+        &mut self,
+        id: &AlertId,
+        recipient: &Private,
+        at: At,
+        out: &mut Vec<Decision>,
+    ) {
+        self.with(id, |open, protocol| {
+            open.life(at, LifeStep::Refused { recipient: recipient.clone() }, out);
+            let reached =
+                open.told.iter().any(|(_, others)| others.iter().any(|other| other != recipient));
+            if open.alert.state == AlertState::Open && !reached {
+                open.escalate(protocol, at, out);
+            }
+        });
+    }
+
+    pub(super) fn acknowledged(
+        &mut self,
+        id: &AlertId,
+        at: At,
+        step: LifeStep,
+        out: &mut Vec<Decision>,
+    ) {
+        self.with(id, |open, _| {
+            open.alert.state = AlertState::Acknowledged;
+            open.deadline = None;
+            open.life(at, step, out);
+        });
+    }
+
+    pub(super) fn snoozed(
+        &mut self,
+        id: &AlertId,
+        until: At,
+        at: At,
+        step: LifeStep,
+        out: &mut Vec<Decision>,
+    ) {
+        self.with(id, |open, _| {
+            open.alert.state = AlertState::Acknowledged;
+            open.deadline = Some((until.max(at), Awaits::SnoozeEnd));
+            open.life(at, step, out);
+        });
+    }
+
+    pub(super) fn handed_over(
+        &mut self,
+        id: &AlertId,
+        by: &Person,
+        to: &Role,
+        at: At,
+        out: &mut Vec<Decision>,
+    ) {
+        self.with(id, |open, protocol| {
+            open.alert.state = AlertState::Open;
+            open.life(at, LifeStep::HandedOver { by: by.as_str().into(), to: to.clone() }, out);
+            open.tell(protocol, vec![to.clone()], NoticeReason::HandedOver, at, out);
+        });
+    }
+
+    pub(super) fn closed_by_person(
+        &mut self,
+        id: &AlertId,
+        at: At,
+        step: LifeStep,
+        out: &mut Vec<Decision>,
+    ) {
+        let Some(key) = self.by_id.get(id).cloned() else { return };
+        let current = self.open.get(&key).is_some_and(|open| open.alert.id == *id);
+        if let Some(mut open) = current.then(|| self.open.remove(&key)).flatten() {
+            self.forget_deadline(&open);
+            open.alert.state = AlertState::Closed;
+            open.life(at, step, out);
+            self.settled.insert(key, Settled { rank: open.rank, rests_on: open.rests_on });
+        }
+    }
+
+    /// An alert's own deadline.
+    pub(super) fn alert_due(&mut self, id: &AlertId, at: At, out: &mut Vec<Decision>) {
+        self.with(id, |open, protocol| match open.deadline.take() {
+            Some((due, awaits)) if due <= at => match awaits {
+                Awaits::Answer => open.escalate(protocol, at, out),
+                Awaits::SnoozeEnd => {
+                    open.alert.state = AlertState::Open;
+                    open.life(at, LifeStep::SnoozeEnded, out);
+                    let roles = open.told.iter().map(|(role, _)| role.clone()).collect();
+                    open.tell(protocol, roles, NoticeReason::SnoozeEnded, at, out);
+                }
+                Awaits::QuietEnd(roles, reason) => open.tell(protocol, roles, reason, at, out),
+            },
+            other => open.deadline = other,
+        });
+    }
+
+    fn keep(&mut self, key: Key, open: OpenAlert) {
+        if let Some((at, _)) = &open.deadline {
+            self.due.insert((*at, Due::Alert(open.alert.id.clone())));
+        }
+        self.open.insert(key, open);
+    }
+
+    fn forget_deadline(&mut self, open: &OpenAlert) {
+        if let Some((at, _)) = &open.deadline {
+            self.due.remove(&(*at, Due::Alert(open.alert.id.clone())));
+        }
+    }
+}
+
+impl OpenAlert {
+    fn life(&self, at: At, step: LifeStep, out: &mut Vec<Decision>) {
+        out.push(Decision::Life { alert: self.alert.id.clone(), at, step });
+    }
+
+    /// Tells roles now, or at the end of the tier's quiet hours.
+    fn tell(
+        &mut self,
+        protocol: &Protocol,
+        roles: Vec<Role>,
+        reason: NoticeReason,
+        at: At,
+        out: &mut Vec<Decision>,
+    ) {
+        let Some(tier) = protocol.tiers.get(self.rank) else { return };
+        if roles.is_empty() {
+            self.deadline = None;
+            return;
+        }
+        let local = at.with_timezone(&protocol.zone).time();
+        if let Some(hours) = tier.quiet.filter(|hours| within(*hours, local)) {
+            self.deadline = Some((quiet_end(hours.1, local, at), Awaits::QuietEnd(roles, reason)));
+            return;
+        }
+        let answer_by = tier.answer_within.map(|within| at + within);
+        self.deadline = answer_by.map(|by| (by, Awaits::Answer));
+        for role in roles {
+            let recipients = protocol.recipients(&role, self.ward.as_ref(), at);
+            match self.told.iter_mut().find(|(known, _)| *known == role) {
+                Some((_, known)) => {
+                    for recipient in &recipients {
+                        if !known.contains(recipient) {
+                            known.push(recipient.clone());
+                        }
+                    }
+                }
+                None => self.told.push((role.clone(), recipients.clone())),
+            }
+            self.notice(role, recipients, reason.clone(), answer_by, at, out);
+        }
+    }
+
+    /// Tells the next role; past the last, that one again, for ever, because an unanswered alert is never dropped.
+    fn escalate(&mut self, protocol: &Protocol, at: At, out: &mut Vec<Decision>) {
+        let Some(tier) = protocol.tiers.get(self.rank) else { return };
+        let index = usize::try_from(self.escalations)
+            .unwrap_or(usize::MAX)
+            .min(tier.then.len().saturating_sub(1));
+        let Some(to) = tier.then.get(index).cloned() else { return };
+        self.escalations += 1;
+        self.life(at, LifeStep::Escalated { number: self.escalations, to: to.clone() }, out);
+        self.tell(protocol, vec![to], NoticeReason::Escalated, at, out);
+    }
+
+    fn notice(
+        &mut self,
+        role: Role,
+        recipients: Vec<Private>,
+        reason: NoticeReason,
+        answer_by: Option<At>,
+        at: At,
+        out: &mut Vec<Decision>,
+    ) {
+        out.push(Decision::Tell(Box::new(Notice {
+            step: self.steps,
+            reason,
+            role,
+            recipients,
+            at,
+            answer_by,
+            alert: self.alert.clone(),
+        })));
+        self.steps += 1;
+    }
+}
+
+/// The moment at which quiet hours end next. The hours are a wall clock's; over a clock change this is up to an hour
+/// off, and then the end is looked at again, so nothing is told within quiet hours.
+fn quiet_end(end: NaiveTime, local: NaiveTime, at: At) -> At {
+    let mut wait = end - local;
+    if wait <= TimeDelta::zero() {
+        wait += TimeDelta::days(1);
+    }
+    at + wait
+}

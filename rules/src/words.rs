@@ -1,0 +1,124 @@
+//! Sentences and parts of sentences that messages share, so that mail, page and report say a thing the same way.
+
+use crate::correction::Formula;
+use crate::fact::{At, Bound, Condition, Source};
+use crate::medicines::Medicine;
+use crate::view::{Electrolyte, Exposure, Reading, View};
+
+/// `a, b and c`.
+pub fn list<T: AsRef<str>>(items: impl IntoIterator<Item = T>) -> String {
+    let items: Vec<T> = items.into_iter().collect();
+    match items.as_slice() {
+        [] => String::new(),
+        [one] => one.as_ref().to_owned(),
+        [first @ .., last] => {
+            let first: Vec<&str> = first.iter().map(AsRef::as_ref).collect();
+            format!("{} and {}", first.join(", "), last.as_ref())
+        }
+    }
+}
+
+/// Local time in the protocol's zone: `2 Mar 03:10`.
+pub fn time(view: &View<'_>, at: At) -> String {
+    at.with_timezone(&view.protocol.zone).format("%-d %b %H:%M").to_string()
+}
+
+/// How long ago, in the largest unit that says enough: `40 min`, `26 h`, `5 days`.
+pub fn ago(view: &View<'_>, at: At) -> String {
+    let minutes = (view.now - at).num_minutes().max(0);
+    match minutes {
+        0..=89 => format!("{minutes} min ago"),
+        90..=4319 => format!("{} h ago", (minutes + 30) / 60),
+        _ => format!("{} days ago", minutes / 1440),
+    }
+}
+
+/// Where a fact came from.
+pub fn source(source: &Source) -> String {
+    match source {
+        Source::File { file, place, .. } => format!("file {}, {place}", file.short()),
+        Source::Person(person) => format!("entered by hand by {person}"),
+        Source::Service => "the service".into(),
+    }
+}
+
+/// Where a reading came from.
+pub fn of_reading(reading: &Reading<'_>) -> String {
+    match reading.over_read_by {
+        Some(person) => format!("over-read by {person}"),
+        None => source(&reading.recorded.source),
+    }
+}
+
+/// `QTc (Fridericia, global, tangent)`.
+pub fn qtc_name(view: &View<'_>, formula: Formula) -> String {
+    let rule = &view.protocol.reading;
+    format!("QTc ({})", rule.words().replacen(rule.formula.name(), formula.name(), 1))
+}
+
+/// A result as sent, converted where the unit was another.
+pub fn amount(found: &Electrolyte) -> String {
+    let sign = match found.bound {
+        Bound::Equal => "",
+        Bound::Below => "< ",
+        Bound::Above => "> ",
+    };
+    let own = format!("{sign}{:.2} mmol/L", found.value);
+    if found.as_sent.contains("mmol/L") {
+        own
+    } else {
+        format!("{own} (sent as {})", found.as_sent)
+    }
+}
+
+/// `potassium 3.10 mmol/L, 2 Mar 06:00 (4 h ago), stale, haemolysed or unreliable specimen`.
+pub fn electrolyte(view: &View<'_>, name: &str, found: &Electrolyte) -> String {
+    let mut text = format!(
+        "{name} {}, {} ({})",
+        amount(found),
+        time(view, found.collected),
+        ago(view, found.collected)
+    );
+    if found.stale {
+        text.push_str(", stale");
+    }
+    if found.unreliable {
+        text.push_str(", haemolysed or unreliable specimen: the true value may be lower");
+    }
+    text
+}
+
+/// A listed medicine with its evidence, dose and last administration.
+pub fn medicine(view: &View<'_>, medicine: &Medicine, exposure: &Exposure) -> String {
+    let mut parts = vec![medicine.substance.clone()];
+    if let Some((at, dose)) = exposure.doses.last() {
+        let dose = if dose.is_empty() { String::new() } else { format!("{dose}, ") };
+        parts.push(format!("last dose {dose}{} ({})", time(view, *at), ago(view, *at)));
+    } else {
+        parts.push("ordered, no administration known".into());
+    }
+    if !exposure.orders.is_empty() {
+        parts.push(format!("order: {}", exposure.orders.join("; ")));
+    }
+    parts.push(format!("since {}", time(view, exposure.started)));
+    if let Some(evidence) = view.list.evidence.get(&medicine.evidence) {
+        parts.push(evidence.clone());
+    }
+    parts.join("; ")
+}
+
+/// A condition's name as people say it.
+pub fn condition(condition: Condition) -> &'static str {
+    match condition {
+        Condition::HeartFailure => "heart failure with reduced ejection fraction",
+        Condition::AcuteMyocardialInfarction => "acute myocardial infarction",
+        Condition::Sepsis => "sepsis",
+        Condition::InheritedLongQt => "inherited long QT syndrome",
+        Condition::EarlierTorsades => "earlier torsades de pointes",
+        Condition::BundleBranchBlock => "bundle-branch block",
+        Condition::Pacemaker => "pacemaker",
+        Condition::LoopDiuretic => "loop diuretic",
+        Condition::LiverFailure => "liver failure",
+        Condition::EatingDisorder => "eating disorder or starvation",
+    }
+}

@@ -1,0 +1,3 @@
+//! The shipped examples and the decider, from outside.
+
+mod config;
