@@ -3,9 +3,11 @@
 pub mod agree;
 pub mod clock;
 pub mod commands;
+pub mod delivery;
 pub mod draw;
 pub mod intake;
 pub mod ledger;
+pub mod mail;
 pub mod page;
 pub mod people;
 pub mod qtc;

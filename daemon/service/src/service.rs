@@ -7,6 +7,7 @@
 //! ```
 
 use crate::clock::Clock;
+use crate::delivery;
 use crate::intake::{Intake, Pass, Waker, wakes};
 use crate::ledger::{Folded, Ledger, Parts, Render};
 use crate::rulebooks::Rulebooks;
@@ -170,7 +171,8 @@ impl Service {
             .map_err(|error| StartError::Threads(error.to_string()))?;
 
         let tasks = TaskTracker::new();
-        tasks.spawn(deadlines(ledger.clone(), clock, stop.clone()));
+        tasks.spawn(deadlines(ledger.clone(), clock.clone(), stop.clone()));
+        tasks.spawn(deliver(ledger.clone(), settings_out.clone(), clock, stop.clone()));
         tasks.spawn(look_after(ledger.clone(), settings_out, stop.clone()));
         tasks.close();
         Ok(Service {
@@ -342,6 +344,18 @@ async fn deadlines(ledger: Ledger, clock: Clock, stop: CancellationToken) {
                 Err(_) => return,
             }
         }
+    }
+}
+
+/// Delivers, and logs why it ended where it should not have.
+async fn deliver(
+    ledger: Ledger,
+    settings: watch::Receiver<Arc<Settings>>,
+    clock: Clock,
+    stop: CancellationToken,
+) {
+    if let Err(error) = delivery::run(ledger, settings, clock, stop).await {
+        tracing::error!(%error, "delivery stopped");
     }
 }
 

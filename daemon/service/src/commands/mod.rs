@@ -7,6 +7,7 @@ mod check;
 mod held;
 mod measure;
 mod settings;
+mod watch;
 
 use clap::{Parser, Subcommand};
 use std::process::ExitCode;
@@ -25,6 +26,7 @@ struct Arguments {
 
 #[derive(Debug, Subcommand)]
 enum Command {
+    Watch(watch::Watch),
     Measure(measure::Measure),
     Check(check::Check),
     Alerts(alerts::Alerts),
@@ -66,6 +68,7 @@ pub fn run() -> ExitCode {
         }
     };
     match arguments.command {
+        Command::Watch(watch) => watch.run(),
         Command::Measure(measure) => measure.run(),
         Command::Check(check) => check.run(),
         Command::Alerts(alerts) => alerts.run(),

@@ -31,7 +31,11 @@ impl Watch {
             Err(ended) => return ended,
         };
         log(self.log_json);
-        let runtime = match tokio::runtime::Builder::new_multi_thread().worker_threads(2).enable_all().build() {
+        let runtime = match tokio::runtime::Builder::new_multi_thread()
+            .worker_threads(2)
+            .enable_all()
+            .build()
+        {
             Ok(runtime) => runtime,
             Err(error) => {
                 eprintln!("error: cannot start the runtime: {error}");
@@ -39,13 +43,22 @@ impl Watch {
             }
         };
         let render = mail::renderer(&settings);
-        let setup = Setup { settings, settings_file: self.place.settings.clone(), clock: Clock::System, render };
+        let setup = Setup {
+            settings,
+            settings_file: self.place.settings.clone(),
+            clock: Clock::System,
+            render,
+        };
         runtime.block_on(watch(setup))
     }
 }
 
 async fn watch(setup: Setup) -> Ended {
-    let signals = (signal(SignalKind::terminate()), signal(SignalKind::interrupt()), signal(SignalKind::hangup()));
+    let signals = (
+        signal(SignalKind::terminate()),
+        signal(SignalKind::interrupt()),
+        signal(SignalKind::hangup()),
+    );
     let (Ok(mut term), Ok(mut int), Ok(mut hangup)) = signals else {
         eprintln!("error: cannot listen for signals");
         return Ended::Broken;
@@ -54,13 +67,18 @@ async fn watch(setup: Setup) -> Ended {
         Ok(service) => service,
         Err(error) => {
             eprintln!("error: {error}");
-            return if matches!(error, StartError::Rulebooks(_)) { Ended::WrongUse } else { Ended::Broken };
+            return if matches!(error, StartError::Rulebooks(_)) {
+                Ended::WrongUse
+            } else {
+                Ended::Broken
+            };
         }
     };
     tell(&[NotifyState::Ready]);
     tracing::info!("watching");
     // The supervisor wants a sign twice within its patience; without a supervisor once in a while does no harm.
-    let patience = sd_notify::watchdog_enabled().map_or(Duration::from_secs(60), |patience| patience / 2);
+    let patience =
+        sd_notify::watchdog_enabled().map_or(Duration::from_secs(60), |patience| patience / 2);
     let mut sign = tokio::time::interval(patience);
     let ended = loop {
         tokio::select! {
@@ -101,6 +119,9 @@ fn tell(state: &[NotifyState<'_>]) {
 /// Logs go to standard error, where a supervisor keeps them. `EBBMARK_LOG` sets what is logged.
 fn log(json: bool) {
     let filter = EnvFilter::try_from_env("EBBMARK_LOG").unwrap_or_else(|_| EnvFilter::new("info"));
-    let log = tracing_subscriber::fmt().with_env_filter(filter).with_writer(std::io::stderr).with_target(false);
+    let log = tracing_subscriber::fmt()
+        .with_env_filter(filter)
+        .with_writer(std::io::stderr)
+        .with_target(false);
     if json { log.json().init() } else { log.init() }
 }

@@ -4,7 +4,7 @@
 use crate::store::{Held, TextKind};
 use chrono::TimeDelta;
 use ebbmark_rules::fact::{At, Body, Description, Fact, Feed, Sex, Source, Trouble};
-use ebbmark_rules::ids::{ContentHash, PatientId};
+use ebbmark_rules::ids::{ContentHash, PatientId, Private};
 use std::collections::{BTreeMap, BTreeSet};
 
 /// A fold over the facts.
@@ -47,11 +47,17 @@ impl Known {
             let known = self.described.entry(patient.clone()).or_default();
             known.sex = new.sex.or(known.sex);
             known.birth_date = new.birth_date.or(known.birth_date);
+            known.name = new.name.clone().or(known.name.take());
         } else if let Body::Merged { into } = body {
             self.merged.insert(patient.clone(), into.clone());
         } else if let Body::Split = body {
             self.merged.remove(patient);
         }
+    }
+
+    /// The name that the chart has for a patient.
+    pub(super) fn name(&self, patient: &PatientId) -> Option<&Private> {
+        self.described.get(self.holder(patient))?.name.as_ref()
     }
 
     /// The text of this kind that is in force.

@@ -92,9 +92,21 @@ pub struct Tally {
     pub posted: usize,
 }
 
-/// Turns a notice into the message for one recipient, given the message's id. Pure: the same notice gives the same
-/// bytes.
-pub type Render = Box<dyn Fn(&Notice, &Private, &str) -> Vec<u8> + Send>;
+/// What a message is made of.
+#[derive(Debug, Clone, Copy)]
+pub struct Post<'a> {
+    /// What is to be told.
+    pub notice: &'a Notice,
+    /// To whom.
+    pub recipient: &'a Private,
+    /// The message's identity, without angle brackets.
+    pub message_id: &'a str,
+    /// The patient's name, if the chart has one; whether it may be shown is the site's choice.
+    pub name: Option<&'a Private>,
+}
+
+/// Makes the whole message. Pure: the same post gives the same bytes.
+pub type Render = Box<dyn Fn(&Post<'_>) -> Vec<u8> + Send>;
 
 /// What the ledger needs of the outside.
 pub struct Parts {

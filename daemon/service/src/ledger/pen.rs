@@ -2,7 +2,7 @@
 
 use super::keeper::Shelf;
 use super::known::Known;
-use super::{Arrival, Draft, Reading, Render, Tally};
+use super::{Arrival, Draft, Post, Reading, Render, Tally};
 use crate::store::outbox::message_id;
 use crate::store::{Held, Outcome, StoreError, Taken, What, Writing};
 use ebbmark_rules::alert::{Decision, Notice};
@@ -101,7 +101,8 @@ impl Pen<'_, '_> {
     pub(super) fn post(&mut self, notice: &Notice) -> Result<(), StoreError> {
         for recipient in &notice.recipients {
             let id = message_id(&notice.alert.id, notice.step, recipient, self.domain);
-            let bytes = (self.render)(notice, recipient, &id);
+            let name = notice.alert.patient.as_ref().and_then(|patient| self.known.name(patient));
+            let bytes = (self.render)(&Post { notice, recipient, message_id: &id, name });
             self.change.post(notice, recipient, &id, &bytes)?;
             self.tally.posted += 1;
         }

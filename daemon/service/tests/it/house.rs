@@ -52,13 +52,12 @@ impl House {
     }
 
     pub(crate) async fn start(&self) -> Service {
+        let settings = Settings::read(&self.settings_file()).unwrap();
         Service::start(Setup {
-            settings: Settings::read(&self.settings_file()).unwrap(),
             settings_file: self.settings_file(),
             clock: Clock::System,
-            render: Box::new(|notice, _, id| {
-                format!("{id}\n{}\n", notice.alert.evidence.seen).into_bytes()
-            }),
+            render: ebbmark::mail::renderer(&settings),
+            settings,
         })
         .await
         .unwrap()
