@@ -4,10 +4,11 @@ use super::settings::Where;
 use super::{Ended, say};
 use crate::rulebooks::Rulebooks;
 use clap::Args;
+use ebbmark_rules::protocol::explain;
 
-/// Check settings, protocol and medicine list, with the examples that they carry
+/// Check settings, protocol and medicine list, and tell the protocol back in plain sentences
 ///
-/// Says of each mistake where it stands. Exit code 2 says that there are some.
+/// Runs every example in the protocol. Says of each mistake where it stands; exit code 2 says that there are some.
 #[derive(Debug, Args)]
 pub(super) struct Check {
     #[command(flatten)]
@@ -21,8 +22,12 @@ impl Check {
             Err(ended) => return ended,
         };
         match Rulebooks::read(&settings.folders) {
-            Ok(_) => {
-                say("settings, protocol and medicine list are right\n");
+            Ok(books) => {
+                say(&format!(
+                    "{}\nSettings, protocol and medicine list are right; all {} examples hold.\n",
+                    explain(&books.protocol).trim_end(),
+                    books.examples
+                ));
                 Ended::Done
             }
             Err(problems) => {

@@ -7,6 +7,7 @@ use crate::mail;
 use crate::service::{Service, Setup, StartError};
 use clap::Args;
 use sd_notify::NotifyState;
+use std::io::IsTerminal;
 use std::time::Duration;
 use tokio::signal::unix::{SignalKind, signal};
 use tracing_subscriber::EnvFilter;

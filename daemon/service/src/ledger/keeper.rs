@@ -7,9 +7,8 @@ use super::{Arrival, Command, Draft, Folded, Parts, Render, Reply, Tally};
 use crate::clock::Clock;
 use crate::store::outbox::{Outgoing, Sending};
 use crate::store::{Store, StoreError, TextKind};
-use chrono::TimeDelta;
 use ebbmark_rules::decide::{Decider, Texts};
-use ebbmark_rules::fact::{At, Body, Feed, Source, Trouble};
+use ebbmark_rules::fact::{At, Body, Source, Trouble};
 use ebbmark_rules::ids::ContentHash;
 use std::collections::BTreeMap;
 use std::panic::{AssertUnwindSafe, catch_unwind};
@@ -77,9 +76,6 @@ impl Keeper {
                 }
                 Command::Trouble(trouble, present, reply) => {
                     self.answer(reply, |keeper| keeper.trouble(trouble, present))
-                }
-                Command::Feeds(allowed, reply) => {
-                    self.answer(reply, |keeper| keeper.feeds(&allowed))
                 }
                 Command::Advance(reply) => self.answer(reply, Keeper::advance),
                 Command::Claim(limit, reply) => self.answer(reply, |keeper| keeper.claim(limit)),
@@ -226,24 +222,6 @@ impl Keeper {
             body,
         }])?;
         Ok(true)
-    }
-
-    fn feeds(
-        &mut self,
-        allowed: &BTreeMap<Feed, TimeDelta>,
-    ) -> Result<Vec<(Feed, bool)>, StoreError> {
-        let now = self.now();
-        let turned = self.known.turned(allowed, now);
-        let draft = |&(feed, silent): &(Feed, bool)| Draft {
-            occurred_at: None,
-            source: Source::Service,
-            patient: None,
-            body: Body::Feed { feed, silent },
-        };
-        if !turned.is_empty() {
-            self.learn(turned.iter().map(draft).collect())?;
-        }
-        Ok(turned)
     }
 
     /// One transaction around `work`.

@@ -2,8 +2,7 @@
 //! that says otherwise is put before a person; what is in force; and what is in trouble, so that it is said once.
 
 use crate::store::{Held, TextKind};
-use chrono::TimeDelta;
-use ebbmark_rules::fact::{At, Body, Description, Fact, Feed, Sex, Source, Trouble};
+use ebbmark_rules::fact::{Body, Description, Fact, Sex, Trouble};
 use ebbmark_rules::ids::{ContentHash, PatientId, Private};
 use std::collections::{BTreeMap, BTreeSet};
 
@@ -14,9 +13,6 @@ pub(super) struct Known {
     merged: BTreeMap<PatientId, PatientId>,
     in_force: BTreeMap<TextKind, ContentHash>,
     troubles: BTreeSet<Trouble>,
-    silent: BTreeSet<Feed>,
-    heard: BTreeMap<Feed, At>,
-    since: Option<At>,
 }
 
 impl Known {
@@ -32,13 +28,11 @@ impl Known {
         } else if let Body::CodesInForce(hash) = &fact.body {
             self.in_force.insert(TextKind::Codes, hash.clone());
         } else if let Body::Service { trouble, present } = fact.body {
-            set(&mut self.troubles, trouble, present);
-        } else if let Body::Feed { feed, silent } = fact.body {
-            set(&mut self.silent, feed, silent);
-        }
-        self.since.get_or_insert(fact.received_at);
-        if let (Some(feed), Source::File { .. }) = (feed(&fact.body), &fact.source) {
-            self.heard.insert(feed, fact.received_at);
+            if present {
+                self.troubles.insert(trouble);
+            } else {
+                self.troubles.remove(&trouble);
+            }
         }
     }
 
@@ -68,22 +62,6 @@ impl Known {
     /// Whether this is in trouble.
     pub(super) fn is_in_trouble(&self, trouble: Trouble) -> bool {
         self.troubles.contains(&trouble)
-    }
-
-    /// Feeds whose silence begins or ends at `now`, where each may be silent for so long.
-    pub(super) fn turned(&self, allowed: &BTreeMap<Feed, TimeDelta>, now: At) -> Vec<(Feed, bool)> {
-        let is_silent = |feed: Feed| match (
-            allowed.get(&feed),
-            self.heard.get(&feed).or(self.since.as_ref()),
-        ) {
-            (Some(allowed), Some(heard)) => now - *heard > *allowed,
-            _ => false,
-        };
-        [Feed::Tracings, Feed::Results, Feed::Medicines]
-            .into_iter()
-            .map(|feed| (feed, is_silent(feed)))
-            .filter(|(feed, silent)| self.silent.contains(feed) != *silent)
-            .collect()
     }
 
     /// Why a file that describes this patient so is not to be believed to be theirs.
@@ -122,26 +100,5 @@ impl Known {
             }
         }
         holder
-    }
-}
-
-/// The feed that a fact of a file shows to be alive.
-fn feed(body: &Body) -> Option<Feed> {
-    if matches!(body, Body::Tracing(_)) {
-        Some(Feed::Tracings)
-    } else if matches!(body, Body::Result(_)) {
-        Some(Feed::Results)
-    } else if matches!(body, Body::Ordered(_) | Body::OrderStopped(_) | Body::Given(_)) {
-        Some(Feed::Medicines)
-    } else {
-        None
-    }
-}
-
-fn set<T: Ord>(set: &mut BTreeSet<T>, item: T, present: bool) {
-    if present {
-        set.insert(item);
-    } else {
-        set.remove(&item);
     }
 }

@@ -16,13 +16,11 @@ pub use fold::Folded;
 use crate::clock::Clock;
 use crate::store::outbox::{Outgoing, Sending};
 use crate::store::{Held, Seen, StoreError, StorePath, TextKind, What};
-use chrono::TimeDelta;
 use ebbmark_formats::BadRow;
 use ebbmark_rules::alert::Notice;
-use ebbmark_rules::fact::{At, Body, Description, Feed, Source, Trouble};
+use ebbmark_rules::fact::{At, Body, Description, Source, Trouble};
 use ebbmark_rules::ids::{ContentHash, PatientId, Private};
 use keeper::Keeper;
-use std::collections::BTreeMap;
 use std::sync::Arc;
 use std::thread::JoinHandle;
 use tokio::sync::{Notify, mpsc, oneshot, watch};
@@ -142,7 +140,6 @@ enum Command {
     Learn(Vec<Draft>, Reply<Tally>),
     Force(TextKind, String, Reply<bool>),
     Trouble(Trouble, bool, Reply<bool>),
-    Feeds(BTreeMap<Feed, TimeDelta>, Reply<Vec<(Feed, bool)>>),
     Advance(Reply<Tally>),
     Claim(usize, Reply<Vec<Outgoing>>),
     Settle(i64, Sending, Reply<()>),
@@ -228,17 +225,6 @@ impl Ledger {
     /// The ledger has stopped or stops now.
     pub async fn trouble(&self, trouble: Trouble, present: bool) -> Result<bool, StoreError> {
         self.ask(|reply| Command::Trouble(trouble, present, reply)).await
-    }
-
-    /// Says which feeds fell silent for longer than they may, and which are heard again; gives those that turned.
-    ///
-    /// # Errors
-    /// The ledger has stopped or stops now.
-    pub async fn feeds(
-        &self,
-        allowed: BTreeMap<Feed, TimeDelta>,
-    ) -> Result<Vec<(Feed, bool)>, StoreError> {
-        self.ask(|reply| Command::Feeds(allowed, reply)).await
     }
 
     /// As [`Ledger::trouble`], for threads outside the async runtime.

@@ -18,8 +18,11 @@ impl House {
     pub(crate) fn new() -> Self {
         let house = Self { folder: tempfile::tempdir().unwrap() };
         std::fs::create_dir(house.export()).unwrap();
-        house.write("medicines.toml", MEDICINES);
-        house.write("protocol.toml", "");
+        // The shipped examples: the service is tested on what a hospital starts from.
+        for name in ["medicines.toml", "protocol.toml"] {
+            let example = Path::new(env!("CARGO_MANIFEST_DIR")).join("../../config").join(name);
+            std::fs::copy(example, house.path().join(name)).unwrap();
+        }
         house.write("ebbmark.toml", SETTINGS);
         house
     }
@@ -119,13 +122,4 @@ largest_file_mib = 8
 by = "folder"
 from = "ebbmark@saltmere.example"
 folder = { path = "mail" }
-"#;
-
-const MEDICINES: &str = r#"
-[list]
-name = "Saltmere list"
-version = "1"
-approved_by = ""
-[evidence]
-strong = "well documented"
 "#;
