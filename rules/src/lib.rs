@@ -1,6 +1,7 @@
 //! Everything that decides: facts in, decisions out. No I/O, no clock.
 
 pub mod alert;
+pub mod codes;
 pub mod correction;
 pub mod decide;
 pub mod electrolytes;

@@ -1,5 +1,8 @@
 //! Bytes in, a recording or chart rows out. Content is recognised by its bytes, never by its name.
 
+mod csv_chart;
+mod csv_tracing;
+mod time;
 mod wfdb;
 
 use chrono::{LocalResult, NaiveDateTime, Offset, TimeZone, Utc};
@@ -43,17 +46,30 @@ impl Site {
 pub enum Kind {
     /// A WFDB record header; its samples lie in files beside it.
     Wfdb,
+    /// A tracing as CSV.
+    CsvTracing,
+    /// Chart rows as CSV.
+    CsvChart,
 }
+
+/// The sniffing table: a format, how its bytes look, how it is read. In the order in which they are tried.
+type Reader = fn(&[u8], &Companions<'_>, &Site) -> Result<Content, Error>;
+const FORMATS: [(Kind, fn(&[u8]) -> bool, Reader); 3] = [
+    (Kind::CsvTracing, csv_tracing::looks_like, csv_tracing::read),
+    (Kind::CsvChart, csv_chart::looks_like, csv_chart::read),
+    (Kind::Wfdb, wfdb::looks_like_header, wfdb::read),
+];
 
 /// Recognises a format by its bytes, never by its name. `None`: nothing that is read.
 pub fn sniff(bytes: &[u8]) -> Option<Kind> {
-    wfdb::looks_like_header(bytes).then_some(Kind::Wfdb)
+    FORMATS.iter().find(|(_, looks, _)| looks(bytes)).map(|(kind, _, _)| *kind)
 }
 
 /// The files that must lie beside this one before it can be read; plain names in the same folder.
 pub fn companions(kind: Kind, bytes: &[u8]) -> Result<Vec<String>, Error> {
     match kind {
         Kind::Wfdb => wfdb::companions(bytes),
+        Kind::CsvTracing | Kind::CsvChart => Ok(Vec::new()),
     }
 }
 
@@ -64,8 +80,9 @@ pub fn read(
     companions: &Companions<'_>,
     site: &Site,
 ) -> Result<Content, Error> {
-    match kind {
-        Kind::Wfdb => wfdb::read(bytes, companions, site),
+    match FORMATS.iter().find(|(known, _, _)| *known == kind) {
+        Some((_, _, read)) => read(bytes, companions, site),
+        None => Err(Error::Hold("no reader for this format".into())),
     }
 }
 
