@@ -123,6 +123,7 @@ fn log(json: bool) {
     let log = tracing_subscriber::fmt()
         .with_env_filter(filter)
         .with_writer(std::io::stderr)
-        .with_target(false);
+        .with_target(false)
+        .with_ansi(std::io::stderr().is_terminal());
     if json { log.json().init() } else { log.init() }
 }

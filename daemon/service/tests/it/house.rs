@@ -55,10 +55,14 @@ impl House {
     }
 
     pub(crate) async fn start(&self) -> Service {
+        self.start_at(Clock::System).await
+    }
+
+    pub(crate) async fn start_at(&self, clock: Clock) -> Service {
         let settings = Settings::read(&self.settings_file()).unwrap();
         Service::start(Setup {
             settings_file: self.settings_file(),
-            clock: Clock::System,
+            clock,
             render: ebbmark::mail::renderer(&settings),
             settings,
         })
@@ -90,6 +94,33 @@ impl House {
         }
     }
 
+    /// The messages in the mail folder, oldest first.
+    pub(crate) fn mails(&self) -> Vec<String> {
+        let Ok(entries) = std::fs::read_dir(self.path().join("mail")) else { return Vec::new() };
+        let mut paths: Vec<_> = entries.map(|entry| entry.unwrap().path()).collect();
+        paths.retain(|path| path.extension().is_some_and(|end| end == "eml"));
+        paths.sort();
+        paths.iter().map(|path| std::fs::read_to_string(path).unwrap()).collect()
+    }
+
+    /// How many messages went to a recipient.
+    pub(crate) fn mails_to(&self, recipient: &str) -> usize {
+        self.mails().iter().filter(|mail| mail.contains(&format!("To: {recipient}@"))).count()
+    }
+
+    /// Waits until so many messages went to a recipient.
+    pub(crate) fn wait_mails_to(&self, recipient: &str, count: usize) {
+        let until = Instant::now() + PATIENCE;
+        while self.mails_to(recipient) < count {
+            assert!(
+                Instant::now() < until,
+                "{} of {count} messages to {recipient}",
+                self.mails_to(recipient)
+            );
+            std::thread::sleep(Duration::from_millis(20));
+        }
+    }
+
     /// What is held: names and reasons, by name.
     pub(crate) fn held(&self) -> Vec<(String, String)> {
         let held = Reader::open(&self.store()).and_then(|reader| reader.held()).unwrap();
@@ -104,9 +135,9 @@ impl House {
 
 const SETTINGS: &str = r#"
 [site]
-name = "Saltmere General"
+name = "Saltmarsh Hospital"
 zone = "Europe/London"
-issuer = "saltmere"
+issuer = "saltmarsh"
 [folders]
 export = "export"
 store = "store"
@@ -120,6 +151,6 @@ pair_wait_s = 2
 largest_file_mib = 8
 [mail]
 by = "folder"
-from = "ebbmark@saltmere.example"
+from = "ebbmark@saltmarsh.example"
 folder = { path = "mail" }
 "#;

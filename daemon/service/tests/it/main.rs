@@ -12,3 +12,4 @@ mod house;
 mod outbox;
 mod program;
 mod storm;
+mod ward;
