@@ -2,6 +2,7 @@
 
 mod csv_chart;
 mod csv_tracing;
+mod dicom;
 mod time;
 mod wfdb;
 
@@ -44,6 +45,8 @@ impl Site {
 /// A format, recognised by content.
 #[derive(Debug, Clone, Copy, PartialEq, Eq)]
 pub enum Kind {
+    /// A DICOM ECG waveform.
+    Dicom,
     /// A WFDB record header; its samples lie in files beside it.
     Wfdb,
     /// A tracing as CSV.
@@ -54,7 +57,8 @@ pub enum Kind {
 
 /// The sniffing table: a format, how its bytes look, how it is read. In the order in which they are tried.
 type Reader = fn(&[u8], &Companions<'_>, &Site) -> Result<Content, Error>;
-const FORMATS: [(Kind, fn(&[u8]) -> bool, Reader); 3] = [
+const FORMATS: [(Kind, fn(&[u8]) -> bool, Reader); 4] = [
+    (Kind::Dicom, dicom::looks_like, dicom::read),
     (Kind::CsvTracing, csv_tracing::looks_like, csv_tracing::read),
     (Kind::CsvChart, csv_chart::looks_like, csv_chart::read),
     (Kind::Wfdb, wfdb::looks_like_header, wfdb::read),
@@ -69,7 +73,7 @@ pub fn sniff(bytes: &[u8]) -> Option<Kind> {
 pub fn companions(kind: Kind, bytes: &[u8]) -> Result<Vec<String>, Error> {
     match kind {
         Kind::Wfdb => wfdb::companions(bytes),
-        Kind::CsvTracing | Kind::CsvChart => Ok(Vec::new()),
+        Kind::Dicom | Kind::CsvTracing | Kind::CsvChart => Ok(Vec::new()),
     }
 }
 
