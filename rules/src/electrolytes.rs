@@ -1,7 +1,7 @@
 //! Electrolytes: one canonical unit per analyte, corrected calcium, CTCAE grades. A value is never rescaled to look
 //! plausible: what is implausible is held for a person.
 
-use crate::fact::Analyte;
+use crate::fact::{Analyte, Bound, ResultValue};
 use serde::{Deserialize, Serialize};
 use std::fmt;
 
@@ -146,6 +146,26 @@ impl Analyte {
 impl fmt::Display for Analyte {
     fn fmt(&self, f: &mut fmt::Formatter<'_>) -> fmt::Result {
         f.write_str(self.word())
+    }
+}
+
+impl ResultValue {
+    /// Whether the true value lies below a limit; `None` where a number that is only a bound can't tell.
+    pub fn is_below(self, limit: f64) -> Option<bool> {
+        match self.bound {
+            Bound::Equal => Some(self.number < limit),
+            Bound::Below => (self.number <= limit).then_some(true),
+            Bound::Above => (self.number >= limit).then_some(false),
+        }
+    }
+
+    /// Whether the true value lies above a limit; `None` where a number that is only a bound can't tell.
+    pub fn is_above(self, limit: f64) -> Option<bool> {
+        match self.bound {
+            Bound::Equal => Some(self.number > limit),
+            Bound::Below => (self.number <= limit).then_some(false),
+            Bound::Above => (self.number >= limit).then_some(true),
+        }
     }
 }
 

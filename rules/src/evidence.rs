@@ -174,15 +174,18 @@ fn formulas(view: &View<'_>, limit_ms: Option<f64>) -> Vec<FormulaRow> {
 
 /// The electrolytes as known, each with its age and marks; what was never measured is said too.
 pub fn electrolytes(view: &View<'_>) -> Vec<Box<str>> {
-    let calcium = match view.electrolyte(Of::CalciumIonised) {
-        Some(_) => Of::CalciumIonised,
-        None => Of::CalciumCorrected,
+    let calcium = match view.best_calcium() {
+        // With no calcium at all, what is known of total calcium is said.
+        Of::CalciumIonised if view.electrolyte(Of::CalciumIonised).is_none() => {
+            Of::CalciumCorrected
+        }
+        best => best,
     };
     [Of::Potassium, Of::Magnesium, calcium]
         .into_iter()
         .map(|of| match view.electrolyte(of) {
             Some(found) => words::electrolyte(view, of_word(of), &found).into(),
-            None => format!("{}: none in this stay", of_word(of)).into(),
+            None => words::no_electrolyte(view, of).into(),
         })
         .collect()
 }

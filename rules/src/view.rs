@@ -3,7 +3,7 @@
 //! before.
 
 use crate::correction::{Formula, NoCorrection, Qt, Qtc};
-use crate::fact::{Analyte, At, Bound, Quality, Sex, Source};
+use crate::fact::{Analyte, At, Bound, LabResult, Quality, ResultValue, Sex, Source};
 use crate::ids::{Person, ResultId, TracingId};
 use crate::medicines::{Medicine, MedicineList, Recognised};
 use crate::patient::{Patient, Recorded, ResultNow};
@@ -85,7 +85,7 @@ pub struct Exposure {
     pub routes: Vec<String>,
 }
 
-/// An electrolyte's latest value.
+/// An electrolyte's value at a time.
 #[derive(Debug, Clone)]
 pub struct Electrolyte {
     /// mmol/L; corrected where it stands for corrected calcium.
@@ -100,10 +100,49 @@ pub struct Electrolyte {
     pub stale: bool,
     /// Haemolysed or otherwise unreliable specimen.
     pub unreliable: bool,
-    /// Which result.
-    pub id: ResultId,
+    /// Unreliable only in that it reads too high.
+    pub reads_high: bool,
+    /// Which results it rests on.
+    pub rests_on: Vec<ResultId>,
     /// From where we know.
     pub source: Source,
+}
+
+impl Electrolyte {
+    /// The number as reported.
+    pub fn read(&self) -> ResultValue {
+        ResultValue { number: self.value, bound: self.bound }
+    }
+
+    /// What the number is worth: from a specimen that reads too high it is an upper bound; from one that is unreliable
+    /// in some other way it is worth nothing.
+    pub fn trusted(&self) -> Option<ResultValue> {
+        match (self.unreliable, self.reads_high, self.bound) {
+            (false, _, _) => Some(self.read()),
+            (true, true, Bound::Equal | Bound::Below) => {
+                Some(ResultValue { number: self.value, bound: Bound::Below })
+            }
+            (true, _, _) => None,
+        }
+    }
+}
+
+/// How a specimen spoils a result, if it does.
+#[derive(Debug, Clone, Copy, PartialEq, Eq)]
+enum Spoilt {
+    ReadsHigh,
+    Unreliable,
+}
+
+/// Burst red cells spill potassium and, less, magnesium, of which they hold more than serum does (common practice, no
+/// source); they do not move calcium enough to matter. A contaminated or clotted specimen may err either way.
+fn spoilt(result: &LabResult) -> Option<Spoilt> {
+    let spills = matches!(result.analyte, Analyte::Potassium | Analyte::Magnesium);
+    match (result.specimen.unreliable, result.specimen.haemolysed && spills) {
+        (true, _) => Some(Spoilt::Unreliable),
+        (false, true) => Some(Spoilt::ReadsHigh),
+        (false, false) => None,
+    }
 }
 
 impl<'a> View<'a> {
@@ -365,48 +404,69 @@ impl<'a> View<'a> {
             .filter_map(move |(index, exposure)| Some((list.medicines().get(*index)?, exposure)))
     }
 
-    /// The latest result of an analyte that has a number.
-    fn latest_result(&self, analyte: Analyte, before: At) -> Option<ResultNow<'a>> {
-        self.patient
+    /// Results of an analyte, specimens up to a moment, oldest first.
+    fn results_of(&self, analyte: Analyte, before: At) -> Vec<ResultNow<'a>> {
+        let mut found: Vec<_> = self
+            .patient
             .results(self.now)
-            .filter(|now| {
-                now.result.analyte == analyte
-                    && now.result.value.is_some()
-                    && now.collected <= before
-            })
-            .max_by(|a, b| (a.collected, &a.result.id).cmp(&(b.collected, &b.result.id)))
+            .filter(|now| now.result.analyte == analyte && now.collected <= before)
+            .collect();
+        found.sort_by(|a, b| (a.collected, &a.result.id).cmp(&(b.collected, &b.result.id)));
+        found
     }
 
-    /// An electrolyte's latest value; corrected calcium where both total calcium and albumin are known.
-    pub fn electrolyte(&self, of: Of) -> Option<Electrolyte> {
-        self.electrolyte_before(of, self.now)
+    /// The latest result of an analyte that has a number.
+    fn latest_result(&self, analyte: Analyte) -> Option<ResultNow<'a>> {
+        let found = self.results_of(analyte, self.now);
+        found.into_iter().rev().find(|now| now.result.value.is_some())
     }
 
     /// When specimens of an electrolyte that gave a reliable number were taken.
     pub fn collected(&self, of: Of) -> Vec<At> {
-        let analyte = of.analyte();
-        self.patient
-            .results(self.now)
-            .filter(|now| {
-                now.result.analyte == analyte
-                    && now.result.value.is_some()
-                    && !now.result.specimen.unreliable
-            })
-            .filter(|now| !(now.result.specimen.haemolysed && of == Of::Potassium))
+        self.results_of(of.analyte(), self.now)
+            .into_iter()
+            .filter(|now| now.result.value.is_some() && spoilt(now.result).is_none())
             .map(|now| now.collected)
             .collect()
     }
 
-    /// The same, from specimens up to a moment.
-    pub fn electrolyte_before(&self, of: Of, before: At) -> Option<Electrolyte> {
-        let now = self.latest_result(of.analyte(), before)?;
+    /// The latest result of an electrolyte, where its specimen was spoilt, whether or not a number came of it.
+    pub fn spoiled(&self, of: Of) -> Option<ResultNow<'a>> {
+        let latest = self.results_of(of.analyte(), self.now).into_iter().next_back();
+        latest.filter(|now| spoilt(now.result).is_some())
+    }
+
+    /// The latest total calcium, uncorrected.
+    pub fn total_calcium(&self) -> Option<ResultNow<'a>> {
+        self.latest_result(Analyte::CalciumTotal)
+    }
+
+    /// An electrolyte's latest value; corrected calcium where both total calcium and an albumin near it are known.
+    pub fn electrolyte(&self, of: Of) -> Option<Electrolyte> {
+        self.known(of, self.latest_result(of.analyte())?)
+    }
+
+    /// Its values from specimens from one moment up to, and without, another; oldest first.
+    pub fn electrolytes_between(&self, of: Of, from: At, until: At) -> Vec<Electrolyte> {
+        self.results_of(of.analyte(), until)
+            .into_iter()
+            .filter(|now| from <= now.collected && now.collected < until)
+            .filter_map(|now| self.known(of, now))
+            .collect()
+    }
+
+    fn known(&self, of: Of, now: ResultNow<'a>) -> Option<Electrolyte> {
         let value = now.result.value?;
         let stale_from = now.collected + self.protocol.stale_after;
         self.changes_at(stale_from);
+        let mut spoilt_by = spoilt(now.result);
         let mut number = value.number;
+        let mut rests_on = vec![now.result.id.clone()];
         if of == Of::CalciumCorrected {
-            let albumin = self.latest_result(Analyte::Albumin, before)?.result.value?;
-            number = crate::electrolytes::corrected_calcium(number, albumin.number);
+            let (albumin, g_per_l) = self.albumin_near(now.collected)?;
+            number = crate::electrolytes::corrected_calcium(number, g_per_l);
+            spoilt_by = spoilt_by.or(spoilt(albumin));
+            rests_on.push(albumin.id.clone());
         }
         Some(Electrolyte {
             value: number,
@@ -414,17 +474,43 @@ impl<'a> View<'a> {
             as_sent: now.result.as_sent.clone(),
             collected: now.collected,
             stale: self.now >= stale_from,
-            // Burst red cells spill potassium; they do not move the others enough to matter.
-            unreliable: now.result.specimen.unreliable
-                || (now.result.specimen.haemolysed && of == Of::Potassium),
-            id: now.result.id.clone(),
+            unreliable: spoilt_by.is_some(),
+            reads_high: spoilt_by == Some(Spoilt::ReadsHigh),
+            rests_on,
             source: now.source.clone(),
         })
     }
 
+    /// The albumin taken nearest to a moment, if it is near enough; of two, the earlier.
+    fn albumin_near(&self, at: At) -> Option<(&'a LabResult, f64)> {
+        self.results_of(Analyte::Albumin, self.now)
+            .into_iter()
+            .filter_map(|now| {
+                let value = now.result.value.filter(|value| value.bound == Bound::Equal)?;
+                Some(((now.collected - at).abs(), now.result, value.number))
+            })
+            .filter(|(apart, _, _)| *apart <= self.protocol.albumin_within)
+            .min_by_key(|(apart, _, _)| *apart)
+            .map(|(_, result, number)| (result, number))
+    }
+
+    /// Calcium in the best form at hand: ionised, unless only the corrected one is fresh and reliable.
+    pub fn best_calcium(&self) -> Of {
+        let worth = |of| match self.electrolyte(of) {
+            Some(found) if !found.stale && !found.unreliable => 2,
+            Some(_) => 1,
+            None => 0,
+        };
+        if worth(Of::CalciumIonised) >= worth(Of::CalciumCorrected) {
+            Of::CalciumIonised
+        } else {
+            Of::CalciumCorrected
+        }
+    }
+
     /// The latest creatinine, µmol/L.
     pub fn creatinine(&self) -> Option<(f64, At)> {
-        let now = self.latest_result(Analyte::Creatinine, self.now)?;
+        let now = self.latest_result(Analyte::Creatinine)?;
         Some((now.result.value?.number, now.collected))
     }
 

@@ -1,8 +1,11 @@
 //! Sentences and parts of sentences that messages share, so that mail, page and report say a thing the same way.
 
 use crate::correction::Formula;
+use crate::evaluate::of_word;
 use crate::fact::{At, Bound, Condition, Source};
 use crate::medicines::Medicine;
+use crate::patient::ResultNow;
+use crate::protocol::condition::Of;
 use crate::view::{Electrolyte, Exposure, Reading, View};
 
 /// `a, b and c`.
@@ -71,7 +74,7 @@ pub fn amount(found: &Electrolyte) -> String {
     }
 }
 
-/// `potassium 3.10 mmol/L, 2 Mar 06:00 (4 h ago), stale, haemolysed or unreliable specimen`.
+/// `potassium 3.10 mmol/L, 2 Mar 06:00 (4 h ago), stale, haemolysed specimen: …`.
 pub fn electrolyte(view: &View<'_>, name: &str, found: &Electrolyte) -> String {
     let mut text = format!(
         "{name} {}, {} ({})",
@@ -82,10 +85,41 @@ pub fn electrolyte(view: &View<'_>, name: &str, found: &Electrolyte) -> String {
     if found.stale {
         text.push_str(", stale");
     }
-    if found.unreliable {
-        text.push_str(", haemolysed or unreliable specimen: the true value may be lower");
-    }
+    text.push_str(specimen(found));
     text
+}
+
+/// What is to be said of the specimen.
+pub fn specimen(found: &Electrolyte) -> &'static str {
+    match (found.unreliable, found.reads_high) {
+        (true, true) => ", haemolysed specimen: the true value may be lower",
+        (true, false) => ", unreliable specimen: the true value may be another",
+        (false, _) => "",
+    }
+}
+
+/// A result of a spoilt specimen: `potassium 4.1 mmol/L, haemolysed specimen of 2 Mar 06:00 (4 h ago)`.
+pub fn spoiled(view: &View<'_>, name: &str, now: ResultNow<'_>) -> String {
+    let how = if now.result.specimen.unreliable { "unreliable" } else { "haemolysed" };
+    let value = if now.result.value.is_some() { &*now.result.as_sent } else { "without a value" };
+    format!(
+        "{name} {value}, {how} specimen of {} ({})",
+        time(view, now.collected),
+        ago(view, now.collected)
+    )
+}
+
+/// What is missing where an electrolyte has no value. A total calcium that can't be corrected is told.
+pub fn no_electrolyte(view: &View<'_>, of: Of) -> String {
+    let name = of_word(of);
+    match view.total_calcium().filter(|_| of == Of::CalciumCorrected) {
+        Some(total) => format!(
+            "{name}: total calcium {} of {} without an albumin near it",
+            total.result.as_sent,
+            time(view, total.collected)
+        ),
+        None => format!("{name}: none in this stay"),
+    }
 }
 
 /// A listed medicine with its evidence, dose and last administration.

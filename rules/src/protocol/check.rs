@@ -78,6 +78,8 @@ pub(super) fn checked(text: &str, file: File) -> Result<Protocol, Vec<Finding>> 
         unknown_half_life: minutes(file.medicines.unknown_half_life_h.0 * 60.0),
         orders: file.medicines.orders,
         stale_after: minutes(file.results.stale_after_h.0 * 60.0),
+        albumin_within: minutes(file.results.albumin_within_h.0 * 60.0),
+        tisdale: file.tisdale,
         wide_qrs_ms: file.wide_qrs.from_ms.0,
         wide_qrs_tier,
         over_read_doubt_ms: file.over_read.doubt_ms.0,

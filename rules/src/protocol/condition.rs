@@ -50,6 +50,8 @@ pub enum Condition {
     Electrolyte(ElectrolyteIs),
     /// How an electrolyte's latest value stands.
     ElectrolyteState(ElectrolyteStateIs),
+    /// Calcium below its limit, in the best form at hand: ionised where it is as recent, else corrected for albumin.
+    LowCalcium(LowCalcium),
 
     /// A risk condition.
     Risk(RiskIs),
@@ -306,6 +308,16 @@ pub struct ElectrolyteIs {
     pub falling_by_mmol_l: Option<Positive>,
     /// … within so many hours.
     pub within_h: Option<Positive>,
+}
+
+/// `low_calcium = { ionised_below_mmol_l = 1.0, corrected_below_mmol_l = 2.0 }`.
+#[derive(Debug, Clone, Deserialize)]
+#[serde(deny_unknown_fields)]
+pub struct LowCalcium {
+    /// Ionised calcium below this.
+    pub ionised_below_mmol_l: Positive,
+    /// Total calcium, corrected for albumin, below this.
+    pub corrected_below_mmol_l: Positive,
 }
 
 /// `electrolyte_state = { of = "potassium", is = "stale" }`.

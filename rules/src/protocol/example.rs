@@ -161,6 +161,8 @@ pub(crate) fn facts(example: &ExamplePatient, now: At) -> Vec<Fact> {
         (Analyte::Potassium, example.potassium),
         (Analyte::Magnesium, example.magnesium),
         (Analyte::CalciumIonised, example.calcium_ionised),
+        (Analyte::CalciumTotal, example.calcium_total),
+        (Analyte::Albumin, example.albumin),
         (Analyte::Creatinine, example.creatinine),
     ] {
         if let Some(number) = value {

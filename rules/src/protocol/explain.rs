@@ -50,8 +50,9 @@ pub fn explain(protocol: &Protocol) -> String {
         }
     ));
     say(format!(
-        "A result older than {} is stale: shown, not trusted.",
-        span(protocol.stale_after)
+        "A result older than {} is stale: shown, not trusted. Calcium is corrected with an albumin taken within {} of it.",
+        span(protocol.stale_after),
+        span(protocol.albumin_within)
     ));
     let wide = protocol.tiers.get(protocol.wide_qrs_tier).map_or("", |tier| tier.name.as_str());
     say(format!(
@@ -233,6 +234,10 @@ fn of(condition: &Condition) -> String {
                 State::Haemolysed => format!("the latest {name} comes from an unreliable specimen"),
             }
         }
+        Condition::LowCalcium(is) => format!(
+            "ionised calcium is below {} mmol/L or, where no ionised calcium is as recent, calcium corrected for albumin is below {} mmol/L",
+            is.ionised_below_mmol_l.0, is.corrected_below_mmol_l.0
+        ),
         Condition::Risk(is) => {
             let name = words::condition(is.condition);
             match is.is {

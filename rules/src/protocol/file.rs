@@ -18,6 +18,8 @@ pub(super) struct File {
     pub medicines: MedicinesAre,
     pub results: ResultsAre,
     pub wide_qrs: WideQrs,
+    #[serde(default)]
+    pub tisdale: crate::score::Readings,
     pub over_read: OverReadIs,
     #[serde(default)]
     pub feeds: BTreeMap<crate::fact::Feed, FeedIs>,
@@ -102,6 +104,13 @@ pub enum Orders {
 #[serde(deny_unknown_fields)]
 pub(super) struct ResultsAre {
     pub stale_after_h: Positive,
+    #[serde(default = "three_days")]
+    pub albumin_within_h: Positive,
+}
+
+/// Albumin moves slowly, but by a third in days of acute illness (common practice, no source).
+fn three_days() -> Positive {
+    Positive(72.0)
 }
 
 #[derive(Debug, Deserialize)]
@@ -277,6 +286,10 @@ pub struct ExamplePatient {
     pub magnesium: Option<f64>,
     /// Ionised calcium, mmol/L, an hour ago.
     pub calcium_ionised: Option<f64>,
+    /// Total calcium, mmol/L, an hour ago.
+    pub calcium_total: Option<f64>,
+    /// Albumin, g/L, an hour ago.
+    pub albumin: Option<f64>,
     /// Creatinine, umol/L, an hour ago.
     pub creatinine: Option<f64>,
     /// Weight.

@@ -45,6 +45,10 @@ pub struct Protocol {
     pub orders: Orders,
     /// A result older than this is stale.
     pub stale_after: TimeDelta,
+    /// An albumin corrects a calcium taken at most this far from it.
+    pub albumin_within: TimeDelta,
+    /// How the Tisdale score's boundaries are read.
+    pub tisdale: crate::score::Readings,
     /// QRS from which it is wide, ms.
     pub wide_qrs_ms: f64,
     /// The highest tier that a wide-QRS value reaches alone.

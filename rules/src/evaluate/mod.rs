@@ -1,17 +1,22 @@
 //! What a condition answers about a patient at a moment.
 
+mod electrolyte;
+mod tisdale;
+
+pub(crate) use electrolyte::of_word;
+pub use tisdale::tisdale_of;
+
 use crate::alert::EvidenceRow;
 use crate::correction::Formula;
-use crate::fact::{At, Bound, Quality, Rhythm, Sex};
+use crate::fact::{At, Quality, Rhythm, Sex};
 use crate::medicines::Medicine;
 use crate::protocol::LimitBySex;
 use crate::protocol::condition::{
-    By, Condition, ElectrolyteIs, ElectrolyteStateIs, Limit, Medicines, Of, Over, QtcIs, QtcRise,
-    RateIs, RiskIs, RiskState, State, TracingIs,
+    By, Condition, Limit, Medicines, Over, QtcIs, QtcRise, RateIs, RiskIs, RiskState, TracingIs,
 };
 use crate::verdict::{Basis, Because, Missing, Verdict};
-use crate::view::{Electrolyte, Exposure, Reading, View};
-use crate::{kidney, score, watch, wide, words};
+use crate::view::{Exposure, Reading, View};
+use crate::{kidney, watch, wide, words};
 use chrono::TimeDelta;
 use toml::Spanned;
 
@@ -56,10 +61,11 @@ pub fn evaluate(condition: &Condition, view: &View<'_>) -> Verdict {
                 [],
             )
         }
-        Condition::Electrolyte(is) => electrolyte(view, is),
-        Condition::ElectrolyteState(is) => electrolyte_state(view, is),
+        Condition::Electrolyte(is) => electrolyte::limit(view, is),
+        Condition::ElectrolyteState(is) => electrolyte::state(view, is),
+        Condition::LowCalcium(is) => electrolyte::low_calcium(view, is),
         Condition::Risk(is) => risk(view, is),
-        Condition::Tisdale(is) => tisdale(view, is.at_least.0),
+        Condition::Tisdale(is) => tisdale::at_least(view, is.at_least.0),
         Condition::Age(is) => match view.patient.age(view.now) {
             Some(age) => {
                 let limit = format!("at least {} years", is.at_least_years);
@@ -531,119 +537,6 @@ fn clearance(view: &View<'_>, below: f64) -> Verdict {
     }
 }
 
-pub(crate) fn of_word(of: Of) -> &'static str {
-    match of {
-        Of::Potassium => "potassium",
-        Of::Magnesium => "magnesium",
-        Of::CalciumCorrected => "calcium corrected for albumin",
-        Of::CalciumIonised => "ionised calcium",
-    }
-}
-
-fn electrolyte(view: &View<'_>, is: &ElectrolyteIs) -> Verdict {
-    let name = of_word(is.of);
-    let Some(found) = view.electrolyte(is.of) else {
-        return Verdict::cannot_tell(format!("no {name} in this stay"));
-    };
-    if found.stale {
-        return Verdict::cannot_tell(format!(
-            "{name} is stale: {}",
-            words::electrolyte(view, name, &found)
-        ));
-    }
-    let fired = |limit: &str| {
-        let row = row(
-            name,
-            &words::amount(&found),
-            limit,
-            Some(found.collected),
-            &words::source(&found.source),
-        );
-        Verdict::fired(row, [Basis::Result(found.id.clone())])
-    };
-    let hides = || {
-        Verdict::cannot_tell(format!(
-            "{name} is not reliable: {}",
-            words::electrolyte(view, name, &found)
-        ))
-    };
-    if let Some(below) = is.below_mmol_l {
-        let limit = format!("below {} mmol/L", below.0);
-        return match found.bound {
-            _ if found.value < below.0 => fired(&limit),
-            // "< 4.0" may be anything below; what haemolysis adds may hide a low value.
-            Bound::Below => Verdict::cannot_tell(format!(
-                "{name} is only known to be below {:.1} mmol/L",
-                found.value
-            )),
-            _ if found.unreliable => hides(),
-            Bound::Equal | Bound::Above => Verdict::Quiet,
-        };
-    }
-    if let Some(above) = is.above_mmol_l {
-        let limit = format!("above {} mmol/L", above.0);
-        return match found.bound {
-            _ if found.unreliable && found.value > above.0 => hides(),
-            _ if found.value > above.0 => fired(&limit),
-            Bound::Above => Verdict::cannot_tell(format!(
-                "{name} is only known to be above {:.1} mmol/L",
-                found.value
-            )),
-            Bound::Below | Bound::Equal => Verdict::Quiet,
-        };
-    }
-    match (is.falling_by_mmol_l, is.within_h) {
-        (Some(by), Some(within)) => falling(view, is.of, &found, by.0, within.0),
-        _ => Verdict::Quiet,
-    }
-}
-
-fn falling(view: &View<'_>, of: Of, now: &Electrolyte, by: f64, within_h: f64) -> Verdict {
-    let name = of_word(of);
-    let earliest = now.collected - TimeDelta::milliseconds((within_h * 3_600_000.0) as i64);
-    let earlier = view
-        .electrolyte_before(of, now.collected - TimeDelta::seconds(1))
-        .filter(|then| then.collected >= earliest);
-    let Some(then) = earlier else {
-        return Verdict::cannot_tell(format!("no {name} within {within_h:.0} h before the latest"));
-    };
-    if now.unreliable || then.unreliable {
-        return Verdict::cannot_tell(format!(
-            "the change of {name} rests on an unreliable specimen"
-        ));
-    }
-    let value = format!("{:.1} to {:.1} mmol/L", then.value, now.value);
-    let limit = format!("a fall of {by} mmol/L within {within_h:.0} h");
-    let rests_on = [Basis::Result(now.id.clone()), Basis::Result(then.id.clone())];
-    // Laboratories report to 0.01; without this, 4.0 - 3.5 in floating point is not a fall of 0.5.
-    yes(
-        then.value - now.value >= by - 1e-9,
-        || row(name, &value, &limit, Some(now.collected), &words::source(&now.source)),
-        rests_on,
-    )
-}
-
-fn electrolyte_state(view: &View<'_>, is: &ElectrolyteStateIs) -> Verdict {
-    let name = of_word(is.of);
-    let found = view.electrolyte(is.of);
-    let fired = |value: &str, found: &Electrolyte| {
-        let row = row(name, value, "", Some(found.collected), &words::source(&found.source));
-        Verdict::fired(row, [Basis::Result(found.id.clone())])
-    };
-    match (is.is, found) {
-        (State::NeverMeasured, None) => {
-            Verdict::fired(row(name, "not measured in this stay", "", None, ""), [])
-        }
-        (State::Stale, Some(found)) if found.stale => {
-            fired(&words::electrolyte(view, name, &found), &found)
-        }
-        (State::Haemolysed, Some(found)) if found.unreliable => {
-            fired(&words::electrolyte(view, name, &found), &found)
-        }
-        _ => Verdict::Quiet,
-    }
-}
-
 fn risk(view: &View<'_>, is: &RiskIs) -> Verdict {
     let known = view.patient.conditions.get(&is.condition);
     let name = words::condition(is.condition);
@@ -657,58 +550,4 @@ fn risk(view: &View<'_>, is: &RiskIs) -> Verdict {
         _ => (false, ""),
     };
     yes(holds, || row(name, value, "", known.map(|(_, at)| *at), "chart"), [])
-}
-
-/// The Tisdale score of a patient as seen now.
-pub fn tisdale_of(view: &View<'_>) -> score::Score {
-    let recorded = |condition| view.patient.conditions.get(&condition).map(|(present, _)| *present);
-    use crate::fact::Condition as C;
-    let admitted = view.patient.admitted(view.now);
-    let first = view
-        .patient
-        .tracings(view.now)
-        .into_iter()
-        .filter(|recorded| admitted.is_none_or(|since| recorded.at >= since - TimeDelta::hours(24)))
-        .map(|recorded| view.read(recorded))
-        .find_map(|reading| view.qtc(&reading, view.protocol.reading.formula).ok());
-    let loops = view
-        .active()
-        .any(|(medicine, _)| medicine.groups.iter().any(|group| group == "loop-diuretic"));
-    let prolonging = view
-        .active()
-        .filter(|(medicine, _)| !medicine.groups.iter().any(|group| group == "indirect"));
-    let potassium =
-        view.electrolyte(Of::Potassium).filter(|k| !k.stale && (!k.unreliable || k.value <= 3.5));
-    score::tisdale(&score::Items {
-        age: view.patient.age(view.now),
-        female: match view.sex() {
-            Some(Sex::Female) => Some(true),
-            Some(Sex::Male) => Some(false),
-            Some(Sex::Other) | None => None,
-        },
-        loop_diuretic: if loops { Some(true) } else { recorded(C::LoopDiuretic).or(Some(false)) },
-        potassium: potassium.map(|k| k.value),
-        admission_qtc_ms: first.map(|(qtc, _)| qtc.value.get()),
-        acute_infarction: recorded(C::AcuteMyocardialInfarction),
-        sepsis: recorded(C::Sepsis),
-        heart_failure: recorded(C::HeartFailure),
-        medicines: Some(prolonging.count()),
-    })
-}
-
-fn tisdale(view: &View<'_>, at_least: f64) -> Verdict {
-    let found = tisdale_of(view);
-    let row =
-        || row("Tisdale score", &found.words(), &format!("at least {at_least:.0}"), None, "chart");
-    if f64::from(found.low) >= at_least {
-        Verdict::fired(row(), [])
-    } else if f64::from(found.high) >= at_least {
-        Verdict::cannot_tell(format!(
-            "Tisdale score is {}: not recorded are {}",
-            found.words(),
-            words::list(found.missing.iter())
-        ))
-    } else {
-        Verdict::Quiet
-    }
 }
