@@ -35,6 +35,13 @@ impl House {
         self.path().join("export")
     }
 
+    /// Puts a whole file in the export folder, as a careful exporter does: under another name first.
+    pub(crate) fn export_file(&self, name: &str, text: impl AsRef<[u8]>) {
+        let draft = self.export().join(format!(".{name}.draft"));
+        std::fs::write(&draft, text).unwrap();
+        std::fs::rename(draft, self.export().join(name)).unwrap();
+    }
+
     pub(crate) fn settings_file(&self) -> PathBuf {
         self.path().join("ebbmark.toml")
     }

@@ -7,8 +7,11 @@
     reason = "a test fails by panicking"
 )]
 
+mod chart;
+mod files;
 mod folder;
 mod house;
+mod kill;
 mod outbox;
 mod program;
 mod storm;
