@@ -124,6 +124,7 @@ pub(crate) fn read(bytes: &[u8], _: &Companions<'_>, site: &Site) -> Result<Cont
         recorded_at: Some(started.at),
         assumed_zone: None,
         printed,
+        calibrated: true,
         warnings,
     })))
 }

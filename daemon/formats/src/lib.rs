@@ -142,6 +142,8 @@ pub struct TracingFile {
     pub assumed_zone: Option<(Box<str>, Box<str>)>,
     /// The cart's own intervals.
     pub printed: Option<Printed>,
+    /// The file states what its numbers mean in volts. Without that, intervals stand and amplitudes do not.
+    pub calibrated: bool,
     /// Things that a reader of the file should know, in words without patient text.
     pub warnings: Vec<Box<str>>,
 }

@@ -31,6 +31,8 @@ struct Line {
     baseline: f64,
     /// µV in one of the header's physical units.
     to_uv: f64,
+    /// The header states the gain.
+    calibrated: bool,
     checksum: Option<i16>,
     name: String,
 }
@@ -117,6 +119,12 @@ pub(crate) fn read(header: &[u8], files: &Companions<'_>, site: &Site) -> Result
             leads.push(Signal { lead: Lead::named(&signal.name), uv });
         }
     }
+    let calibrated = header.signals.iter().all(|line| line.calibrated);
+    if !calibrated {
+        let what =
+            "the header does not state the gain: intervals can be measured, amplitudes are unknown";
+        warnings.push(what.into());
+    }
     let recording =
         Recording::new(header.hz, leads).map_err(|error| Error::Hold(error.to_string()))?;
     let (recorded_at, assumed_zone) = match header.starts {
@@ -135,6 +143,7 @@ pub(crate) fn read(header: &[u8], files: &Companions<'_>, site: &Site) -> Result
         recorded_at,
         assumed_zone,
         printed: None,
+        calibrated,
         warnings,
     })))
 }
@@ -279,10 +288,13 @@ fn signal_line(line: &str) -> Result<Line, String> {
     let number = |text: &str, what: &str| {
         text.parse::<f64>().map_err(|_| format!("the {what} `{text}` is not a number"))
     };
-    let gain = number(gain, "gain")?;
-    if gain == 0.0 || !gain.is_finite() {
-        return Err("the gain is 0: the record is not calibrated".into());
+    let stated = number(gain, "gain")?;
+    if !stated.is_finite() {
+        return Err("the gain is not a number".into());
     }
+    // header(5): a gain of 0 means "not calibrated", and 200 is then assumed.
+    let calibrated = stated != 0.0;
+    let gain = if calibrated { stated } else { 200.0 };
     let to_uv = match unit {
         "mV" => 1000.0,
         "uV" | "µV" | "μV" => 1.0,
@@ -296,6 +308,7 @@ fn signal_line(line: &str) -> Result<Line, String> {
     let _initial = field();
     let checksum = field().and_then(|text| text.parse::<i64>().ok()).map(|sum| sum as i16);
     let _block = field();
+    let name = rest.trim().into();
     Ok(Line {
         file: file.into(),
         packing,
@@ -303,8 +316,9 @@ fn signal_line(line: &str) -> Result<Line, String> {
         gain,
         baseline,
         to_uv,
+        calibrated,
         checksum,
-        name: rest.trim().into(),
+        name,
     })
 }
 
@@ -349,7 +363,9 @@ mod tests {
     }
 
     #[test]
-    fn an_uncalibrated_record_is_refused() {
-        assert!(signal_line("a.dat 16").unwrap_err().contains("not calibrated"));
+    fn a_record_without_a_gain_says_that_it_is_not_calibrated() {
+        let line = signal_line("a.dat 212 0 12 0 0 0 0 ECG1").unwrap();
+        assert!(!line.calibrated && (line.gain - 200.0).abs() < 1e-12);
+        assert!(signal_line("a.dat 16 1000/mV 16 0 0 0 0 II").unwrap().calibrated);
     }
 }

@@ -26,6 +26,9 @@ pub enum Unread {
     /// The reader's own reason.
     #[error(transparent)]
     Format(#[from] Error),
+    /// Its numbers mean no stated voltage.
+    #[error("does not state its gain, so what its numbers mean in volts is not known")]
+    NotCalibrated,
     /// It holds chart rows.
     #[error("holds chart rows, not a tracing")]
     NotATracing,

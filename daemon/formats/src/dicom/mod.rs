@@ -53,6 +53,7 @@ pub(crate) fn read(bytes: &[u8], _: &Companions<'_>, site: &Site) -> Result<Cont
         recorded_at: started.as_ref().map(|told| told.at),
         assumed_zone: started.and_then(|told| told.assumed_zone),
         printed: annotation::printed(object),
+        calibrated: true,
         warnings,
     })))
 }

@@ -298,6 +298,8 @@ fn content(
     now: At,
 ) -> Result<Reading, Unread> {
     match reading::content(kind?, bytes, beside, site)? {
+        // By hand such a file can be measured; on a ward nobody should have to remember that amplitudes are unknown.
+        Content::Tracing(tracing) if !tracing.calibrated => Err(Unread::NotCalibrated),
         Content::Tracing(tracing) => {
             let measurement = reading::measured(&tracing, &Options::default())?;
             Ok(facts::tracing(*tracing, &measurement, hash, now))
