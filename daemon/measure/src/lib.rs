@@ -1,6 +1,8 @@
 //! A [`Recording`] in, a [`Measurement`] out: where the T wave ebbs back to the baseline, and how far to
 //! believe it. Depends on nothing of ours; does no I/O; owns no clock.
 
+#[allow(dead_code, reason = "the fusion of readers calls it")]
+mod learned;
 mod measurement;
 mod recording;
 mod units;
@@ -21,6 +23,12 @@ pub struct Options {
     pub to: Option<Seconds>,
     /// Leave the learned reader out (for comparison and benchmarks).
     pub classical_only: bool,
+}
+
+/// For the scripts that train the learned reader, see `examples/training_windows.rs`. Not for measuring.
+#[doc(hidden)]
+pub fn training_windows(leads: &[&[f32]], hz: f32, r: &[usize]) -> Vec<f32> {
+    learned::training_windows(leads, hz, r)
 }
 
 /// Measures one recording. Never fails: what cannot be told is [`Answer::None`] with its reasons.
