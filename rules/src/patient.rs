@@ -7,7 +7,9 @@ use crate::fact::{
     ResultStatus, Source, Tracing,
 };
 use crate::ids::{OrderId, Person, ResultId, TracingId};
+use chrono::TimeDelta;
 use std::collections::{BTreeMap, BTreeSet};
+use std::ops::Bound;
 
 /// Everything known about one patient number.
 #[derive(Debug, Clone, Default)]
@@ -28,11 +30,17 @@ pub struct Patient {
     pub conditions: BTreeMap<Condition, (bool, At)>,
     /// The tracing that a person chose to compare with.
     pub baseline: Option<(TracingId, Option<Person>)>,
+    /// Moments ahead of the one at which we learned of them: a cart's clock that runs fast, a planned admission.
+    ahead: BTreeSet<At>,
 }
+
+/// Tracings and results from so long before an admission belong to the stay: an emergency department's.
+const BEFORE_ADMISSION: TimeDelta = TimeDelta::hours(24);
 
 #[derive(Debug, Clone, Default)]
 struct OrderStory {
-    order: Option<(At, Order, Source)>,
+    /// The order's contents by when they were true; of one moment the last received stands.
+    contents: BTreeMap<At, Order>,
     steps: Vec<(At, OrderStep)>,
 }
 
@@ -51,10 +59,10 @@ pub struct OrderNow<'a> {
     pub order: &'a Order,
     /// From when it runs.
     pub since: At,
-    /// When its content last changed.
-    pub changed: At,
-    /// Runs now: neither held, stopped nor over.
-    pub running: bool,
+    /// When its dose, route or frequency last changed, if it ever did. The same content sent again is no change.
+    pub changed: Option<At>,
+    /// When it was held, stopped or over; `None` while it runs.
+    pub until: Option<At>,
 }
 
 /// A dose that was given.
@@ -104,6 +112,9 @@ impl Patient {
     /// Folds one fact. Facts about alerts, texts and the service are passed over.
     pub fn take(&mut self, fact: &Fact) {
         let at = fact.occurred_at;
+        if at > fact.received_at {
+            self.ahead.insert(at);
+        }
         match &fact.body {
             Body::Admitted(place) | Body::Moved(place) => self.stay(at, Some(place.clone())),
             Body::Discharged => self.stay(at, None),
@@ -113,10 +124,7 @@ impl Patient {
             Body::Described(new) => self.describe(new),
             Body::Ordered(order) => {
                 let story = self.orders.entry(order.id.clone()).or_default();
-                let newer = story.order.as_ref().is_none_or(|(known, _, _)| *known <= at);
-                if newer {
-                    story.order = Some((at, order.clone(), fact.source.clone()));
-                }
+                story.contents.insert(at, order.clone());
             }
             Body::OrderHeld(id) => self.order_step(id, at, OrderStep::Held),
             Body::OrderResumed(id) => self.order_step(id, at, OrderStep::Resumed),
@@ -216,6 +224,12 @@ impl Patient {
         if self.baseline.is_none() {
             self.baseline = other.baseline.clone();
         }
+        self.ahead.extend(&other.ahead);
+    }
+
+    /// The first moment after this one at which something that is known already becomes true.
+    pub fn next_after(&self, now: At) -> Option<At> {
+        self.ahead.range((Bound::Excluded(now), Bound::Unbounded)).next().copied()
     }
 
     fn stay(&mut self, at: At, place: Option<Place>) {
@@ -270,23 +284,61 @@ impl Patient {
         since
     }
 
+    /// From when on tracings and results belong to the present stay; `None` where no feed tells of admissions, and then
+    /// all of them do.
+    pub fn stay_from(&self, now: At) -> Option<At> {
+        self.admitted(now).map(|since| since - BEFORE_ADMISSION)
+    }
+
+    /// When the patient last left, up to a moment.
+    fn left(&self, now: At) -> Option<At> {
+        let mut stays = self.stays.iter().rev();
+        stays
+            .find(|(at, place)| *at <= now && place.is_none() && !self.cancelled_stays.contains(at))
+            .map(|(at, _)| *at)
+    }
+
     /// Full years at a moment.
     pub fn age(&self, now: At) -> Option<u32> {
         now.date_naive().years_since(self.described.birth_date?)
     }
 
-    /// Orders that were meant, with their standing at a moment.
+    /// The next birthday after a moment, at which limits by age may change.
+    pub fn next_birthday(&self, now: At) -> Option<At> {
+        let born = self.described.birth_date?;
+        let years = self.age(now)? + 1;
+        let day = born.checked_add_months(chrono::Months::new(years.checked_mul(12)?))?;
+        let midnight = day.and_hms_opt(0, 0, 0)?.and_utc();
+        // Born on 29 February: a year counts from 1 March where there is no such day.
+        Some(if midnight > now { midnight } else { midnight + TimeDelta::days(1) })
+    }
+
+    /// Orders that were meant, with their standing at a moment. An order of an earlier stay ended when the patient left.
     pub fn orders(&self, now: At) -> impl Iterator<Item = OrderNow<'_>> {
+        let left = self.left(now);
         self.orders.values().filter_map(move |story| {
-            let (changed, order, _) = story.order.as_ref()?;
-            let last = story.steps.iter().rev().find(|(at, _)| *at <= now).map(|(_, step)| *step);
-            if last == Some(OrderStep::Cancelled) {
+            let (told, order) = story.contents.range(..=now).next_back()?;
+            let (first, _) = story.contents.first_key_value()?;
+            let last = story.steps.iter().rev().find(|(at, _)| *at <= now);
+            if last.is_some_and(|(_, step)| *step == OrderStep::Cancelled) {
                 return None;
             }
-            let since = order.starts.unwrap_or(*changed);
-            let over = order.ends.is_some_and(|end| end <= now) || since > now;
-            let running = !over && matches!(last, None | Some(OrderStep::Resumed));
-            Some(OrderNow { order, since, changed: *changed, running })
+            let since = order.starts.unwrap_or(*first);
+            let stopped = last
+                .filter(|(_, step)| matches!(step, OrderStep::Held | OrderStep::Stopped))
+                .map(|(at, _)| *at);
+            let ended = order.ends.filter(|end| *end <= now);
+            let resumed = last.map_or(*told, |(at, _)| (*at).max(*told));
+            let left = left.filter(|left| resumed.max(since) <= *left);
+            let until = [stopped, ended, left].into_iter().flatten().min();
+            let changed = story
+                .contents
+                .range(..=now)
+                .zip(story.contents.range(..=now).skip(1))
+                .filter(|((_, before), (_, after))| !same_amount(before, after))
+                .map(|(_, (at, _))| *at)
+                .last();
+            Some(OrderNow { order, since, changed, until })
         })
     }
 
@@ -295,6 +347,16 @@ impl Patient {
         self.doses
             .values()
             .filter(move |dose| dose.at <= now && !self.not_given.contains(&dose.given.id))
+    }
+
+    /// A dose by its own number, whether or not it was given after all.
+    pub fn dose(&self, administration: &str) -> Option<&Dose> {
+        self.doses.get(administration)
+    }
+
+    /// An order's latest content, whether or not it was meant.
+    pub fn order(&self, id: &OrderId) -> Option<&Order> {
+        self.orders.get(id)?.contents.last_key_value().map(|(_, order)| order)
     }
 
     /// Results as they hold, specimens up to a moment, in no particular order. A cancelled one, or one that was
@@ -322,7 +384,7 @@ impl Patient {
         self.results.contains_key(id)
     }
 
-    /// Tracings that stand, oldest first.
+    /// Tracings that stand, of whichever stay, oldest first.
     pub fn tracings(&self, now: At) -> Vec<&Recorded> {
         let mut found: Vec<&Recorded> = self
             .tracings
@@ -342,6 +404,11 @@ impl Patient {
     pub fn over_read(&self, id: &TracingId) -> Option<&(At, OverRead)> {
         self.over_reads.get(id)
     }
+}
+
+/// Whether two contents ask for the same amount in the same way.
+pub fn same_amount(one: &Order, other: &Order) -> bool {
+    (&one.dose, &one.route, &one.frequency) == (&other.dose, &other.route, &other.frequency)
 }
 
 /// The version that holds: a preliminary one never replaces a verified one; among the rest the one issued last, at

@@ -47,6 +47,8 @@ pub enum Basis {
     Medicine(Box<str>),
     /// Something due at a time.
     Due(Box<str>, At),
+    /// Something that the chart says, as it says it.
+    Said(Box<str>),
 }
 
 /// What is missing.
@@ -98,10 +100,13 @@ impl Verdict {
     /// At least `n` of them. With `n` = 1 it is "any".
     pub fn at_least(n: usize, verdicts: impl IntoIterator<Item = Verdict>) -> Self {
         let (mut because, mut missing, mut fired) = (Because::default(), Vec::new(), 0);
+        let (mut narrow, mut certain) = (0, 0);
         for verdict in verdicts {
             match verdict {
                 Verdict::Fired(more) => {
                     fired += 1;
+                    narrow += usize::from(!more.wide);
+                    certain += usize::from(!more.borderline);
                     because.join(more);
                 }
                 Verdict::Quiet => {}
@@ -109,6 +114,9 @@ impl Verdict {
             }
         }
         if fired >= n {
+            // Enough of them hold without the estimate, or without the doubt: the answer doesn't rest on it.
+            because.wide &= narrow < n;
+            because.borderline &= certain < n;
             Verdict::Fired(because)
         } else if fired + missing.len() >= n {
             let mut missing = Missing::joined(missing).unwrap_or_default();
@@ -208,6 +216,21 @@ mod tests {
             let found = kind(&Verdict::at_least(n, verdicts.clone()));
             prop_assert_eq!(found, if high == low { high } else { 1 });
         }
+    }
+
+    /// A wide-QRS estimate caps the tier of what rests on it, and of nothing else.
+    #[test]
+    fn what_holds_without_the_estimate_is_not_capped_by_it() {
+        let wide =
+            || Verdict::Fired(Because { wide: true, borderline: true, ..Because::default() });
+        let marks = |verdict| match verdict {
+            Verdict::Fired(because) => (because.wide, because.borderline),
+            other => panic!("{other:?}"),
+        };
+        assert_eq!(marks(Verdict::at_least(1, [wide(), fired()])), (false, false));
+        assert_eq!(marks(Verdict::at_least(2, [wide(), fired()])), (true, true));
+        assert_eq!(marks(Verdict::at_least(2, [wide(), fired(), fired()])), (false, false));
+        assert_eq!(marks(Verdict::all([wide(), fired()])), (true, true));
     }
 
     #[test]

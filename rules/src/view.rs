@@ -3,13 +3,16 @@
 //! before.
 
 use crate::correction::{Formula, NoCorrection, Qt, Qtc};
-use crate::fact::{Analyte, At, Bound, LabResult, Quality, ResultValue, Sex, Source};
+use crate::fact::{
+    Analyte, At, Bound, LabResult, MedicineName, Order, Quality, ResultValue, Sex, Source,
+};
 use crate::ids::{Person, ResultId, TracingId};
 use crate::medicines::{Medicine, MedicineList, Recognised};
-use crate::patient::{Patient, Recorded, ResultNow};
+use crate::patient::{Dose, OrderNow, Patient, Recorded, ResultNow, same_amount};
 use crate::protocol::condition::Of;
 use crate::protocol::{Orders, Protocol, TEnd};
 use crate::units::{Ms, PerMinute};
+use crate::verdict::Basis;
 use chrono::TimeDelta;
 use std::cell::Cell;
 use std::collections::BTreeMap;
@@ -25,14 +28,14 @@ pub struct View<'a> {
     pub list: &'a MedicineList,
     /// The moment.
     pub now: At,
-    /// The latest tracing, whatever it is worth.
+    /// The latest tracing of this stay, whatever it is worth.
     pub latest: Option<Reading<'a>>,
     /// The tracing before that gave a QTc.
     pub before: Option<Reading<'a>>,
     /// The baseline, or why there is none.
     pub baseline: Result<Reading<'a>, NoBaseline>,
     /// Listed substances that were ever given or ordered, by their place on the list.
-    pub exposures: BTreeMap<usize, Exposure>,
+    pub exposures: BTreeMap<usize, Exposure<'a>>,
     /// Names in the feed that the list doesn't know, each once.
     pub not_recognised: Vec<&'a str>,
     next: Cell<Option<At>>,
@@ -68,21 +71,24 @@ pub enum NoBaseline {
     ChosenGone,
 }
 
-/// A listed substance's story.
+/// The latest course of a listed substance. A course ends when its last dose has been gone for as long as the protocol
+/// counts a medicine active; a dose after that begins a new one.
 #[derive(Debug, Clone)]
-pub struct Exposure {
-    /// First dose or start of the first order.
+pub struct Exposure<'a> {
+    /// First dose of the course, or start of its first order.
     pub started: At,
-    /// Times of doses that were given, oldest first, with dose and route as written.
-    pub doses: Vec<(At, String)>,
-    /// Running orders, as written.
-    pub orders: Vec<String>,
-    /// When the dose as written last changed.
+    /// Until when it counts as active; `None` while an order runs.
+    pub until: Option<At>,
+    /// Doses of the course that were given, oldest first.
+    pub doses: Vec<&'a Dose>,
+    /// Running orders.
+    pub orders: Vec<&'a Order>,
+    /// When the dose last changed within the course.
     pub dose_changed: Option<At>,
     /// Active now, by the protocol's rule.
     pub active: bool,
     /// Routes of doses and running orders, as written.
-    pub routes: Vec<String>,
+    pub routes: Vec<&'a str>,
 }
 
 /// An electrolyte's value at a time.
@@ -165,15 +171,20 @@ impl<'a> View<'a> {
             not_recognised: Vec::new(),
             next: Cell::new(None),
         };
+        let soon = [patient.next_after(now), patient.next_birthday(now)];
+        soon.into_iter().flatten().for_each(|at| view.changes_at(at));
         view.expose();
         let tracings = patient.tracings(now);
-        view.latest = tracings.last().map(|recorded| view.read(recorded));
-        view.before = tracings
+        let from = patient.stay_from(now);
+        let mut of_stay = tracings
             .iter()
             .rev()
-            .skip(1)
-            .map(|recorded| view.read(recorded))
-            .find(|read| read.qt.is_some());
+            .take_while(|recorded| from.is_none_or(|from| recorded.at >= from))
+            .map(|recorded| view.read(recorded));
+        let latest = of_stay.next();
+        let before = of_stay.find(|read| read.qt.is_some());
+        view.latest = latest;
+        view.before = before;
         view.baseline = view.find_baseline(&tracings);
         view
     }
@@ -260,8 +271,8 @@ impl<'a> View<'a> {
             || reading.qrs.is_some_and(|qrs| qrs.get() >= self.protocol.wide_qrs_ms)
     }
 
-    /// The person's choice; else the last good tracing before the first listed medicine and not too long before it;
-    /// else the first good one that is not the latest.
+    /// The person's choice; else the last good tracing before the first listed medicine of this stay and not too long
+    /// before it; else the first good one that is not the latest.
     fn find_baseline(&self, tracings: &[&'a Recorded]) -> Result<Reading<'a>, NoBaseline> {
         let gives_qtc =
             |reading: &Reading<'_>| self.qtc(reading, self.protocol.reading.formula).is_ok();
@@ -279,7 +290,16 @@ impl<'a> View<'a> {
                 reading.quality == Quality::Good && !reading.other_definition && gives_qtc(reading)
             })
             .collect();
-        let first_medicine = self.exposures.values().map(|exposure| exposure.started).min();
+        let from = self.patient.stay_from(self.now);
+        let first_medicine = self
+            .exposures
+            .values()
+            .filter(|exposure| {
+                exposure.active
+                    || exposure.until.zip(from).is_some_and(|(until, from)| until >= from)
+            })
+            .map(|exposure| exposure.started)
+            .min();
         let before = first_medicine.and_then(|start| {
             let near = |at: At| at <= start && start - at <= self.protocol.baseline_within;
             good.iter().rev().find(|reading| near(reading.recorded.at))
@@ -291,112 +311,107 @@ impl<'a> View<'a> {
 
     /// Works out exposure to listed substances, and what the list doesn't know.
     fn expose(&mut self) {
-        let mut exposures: BTreeMap<usize, Exposure> = BTreeMap::new();
+        let mut known: Vec<(&'a MedicineName, Recognised)> = Vec::new();
         let mut unknown: Vec<&'a str> = Vec::new();
-        let mut doses: Vec<_> = self.patient.doses(self.now).collect();
-        doses.sort_by_key(|dose| dose.at);
-        let written = |dose: Option<&crate::fact::Dose>, route: Option<&str>| {
-            let dose = dose.map(|dose| format!("{} {}", dose.amount, dose.unit));
-            [dose, route.map(str::to_owned)].into_iter().flatten().collect::<Vec<_>>().join(" ")
-        };
-        let recognise =
-            |medicine: &'a crate::fact::MedicineName, unknown: &mut Vec<&'a str>| match self
-                .list
-                .recognise(medicine)
-            {
-                Recognised::Listed(found) => found,
-                Recognised::LeftOut => Vec::new(),
-                Recognised::No => {
+        let list = self.list;
+        let mut listed = |medicine: &'a MedicineName, route: Option<&str>| -> Vec<usize> {
+            let place = known.iter().position(|(name, _)| *name == medicine).unwrap_or_else(|| {
+                known.push((medicine, list.recognise(medicine)));
+                known.len() - 1
+            });
+            match known.get(place).map(|(_, found)| found) {
+                Some(Recognised::Listed(found)) => found
+                    .iter()
+                    .copied()
+                    .filter(|index| {
+                        list.medicines()
+                            .get(*index)
+                            .is_some_and(|medicine| medicine.counts_by(route))
+                    })
+                    .collect(),
+                Some(Recognised::No) => {
                     if !unknown.contains(&&*medicine.text) {
                         unknown.push(&medicine.text);
                     }
                     Vec::new()
                 }
-            };
-        for dose in doses {
-            let route = dose.given.route.as_deref();
-            for index in recognise(&dose.given.medicine, &mut unknown) {
-                if !self
-                    .list
-                    .medicines()
-                    .get(index)
-                    .is_some_and(|medicine| medicine.counts_by(route))
-                {
-                    continue;
-                }
-                let text = written(dose.given.dose.as_ref(), route);
-                let exposure = exposures.entry(index).or_insert_with(|| Exposure::since(dose.at));
-                if exposure.doses.last().is_some_and(|(_, last)| *last != text) {
-                    exposure.dose_changed = Some(dose.at);
-                }
-                exposure.started = exposure.started.min(dose.at);
-                exposure.doses.push((dose.at, text));
-                exposure.note_route(route);
+                Some(Recognised::LeftOut) | None => Vec::new(),
+            }
+        };
+        let mut courses: BTreeMap<usize, Vec<Piece<'a>>> = BTreeMap::new();
+        for dose in self.patient.doses(self.now) {
+            for index in listed(&dose.given.medicine, dose.given.route.as_deref()) {
+                courses.entry(index).or_default().push(Piece::Dose(dose));
             }
         }
         for now in self.patient.orders(self.now) {
-            let route = now.order.route.as_deref();
-            for index in recognise(&now.order.medicine, &mut unknown) {
-                if !self
-                    .list
-                    .medicines()
-                    .get(index)
-                    .is_some_and(|medicine| medicine.counts_by(route))
-                {
-                    continue;
-                }
+            for index in listed(&now.order.medicine, now.order.route.as_deref()) {
                 if now.since > self.now {
                     self.changes_at(now.since);
-                    continue;
+                } else {
+                    courses.entry(index).or_default().push(Piece::Order(now));
                 }
-                let counts = self.protocol.orders == Orders::Count;
-                if !counts && !exposures.contains_key(&index) {
-                    continue;
-                }
-                let exposure = exposures.entry(index).or_insert_with(|| Exposure::since(now.since));
-                if counts {
-                    exposure.started = exposure.started.min(now.since);
-                    if now.changed > now.since {
-                        exposure.dose_changed = exposure.dose_changed.max(Some(now.changed));
-                    }
-                }
-                if now.running {
-                    let frequency =
-                        now.order.frequency.as_deref().map(|f| format!(" {f}")).unwrap_or_default();
-                    exposure
-                        .orders
-                        .push(format!("{}{frequency}", written(now.order.dose.as_ref(), route)));
-                    exposure.note_route(route);
-                    exposure.active |= counts;
+            }
+        }
+        self.exposures = courses
+            .into_iter()
+            .filter_map(|(index, pieces)| {
+                let medicine = list.medicines().get(index)?;
+                Some((index, self.course(medicine, pieces)?))
+            })
+            .collect();
+        self.not_recognised = unknown;
+    }
+
+    /// Puts doses and orders of one substance together to its latest course.
+    fn course(&self, medicine: &Medicine, mut pieces: Vec<Piece<'a>>) -> Option<Exposure<'a>> {
+        pieces.sort_by(|a, b| a.key().cmp(&b.key()));
+        let lasts = self.half_lives(medicine, self.protocol.active_half_lives);
+        let counts = self.protocol.orders == Orders::Count;
+        let mut course: Option<Exposure<'a>> = None;
+        let mut earlier_order = None;
+        for piece in &pieces {
+            let (from, until) = match piece {
+                Piece::Dose(dose) => (dose.at, Some(dose.at + lasts)),
+                Piece::Order(now) if counts => (now.since, now.until.map(|until| until + lasts)),
+                Piece::Order(_) => continue,
+            };
+            if course.as_ref().is_none_or(|course| course.until.is_some_and(|end| end < from)) {
+                course = Some(Exposure::since(from));
+                earlier_order = None;
+            }
+            let Some(going) = &mut course else { continue };
+            going.until = going.until.zip(until).map(|(one, other)| one.max(other));
+            going.add(piece, &mut earlier_order);
+        }
+        let mut course = course?;
+        for piece in &pieces {
+            if let Piece::Order(now) = piece {
+                if now.until.is_none() {
+                    course.orders.push(now.order);
+                    course.note_route(now.order.route.as_deref());
                     if let Some(end) = now.order.ends {
                         self.changes_at(end);
                     }
                 }
             }
         }
-        for (index, exposure) in &mut exposures {
-            if let (Some((last, _)), Some(medicine)) =
-                (exposure.doses.last(), self.list.medicines().get(*index))
-            {
-                let gone = *last + self.half_lives(medicine, self.protocol.active_half_lives);
-                exposure.active |= self.now < gone;
-                self.changes_at(gone);
-            }
+        course.active = course.until.is_none_or(|until| self.now < until);
+        if let Some(until) = course.until {
+            self.changes_at(until);
         }
-        self.exposures = exposures;
-        self.not_recognised = unknown;
+        Some(course)
     }
 
     /// So many half-lives of a substance; the protocol's assumed one where the list gives none.
     pub fn half_lives(&self, medicine: &Medicine, number: f64) -> TimeDelta {
-        let one = medicine.half_life.map_or(self.protocol.unknown_half_life, |hours| {
-            TimeDelta::milliseconds((hours.get() * 3_600_000.0) as i64)
-        });
-        TimeDelta::milliseconds((one.num_milliseconds() as f64 * number) as i64)
+        let one =
+            medicine.half_life.map_or(self.protocol.unknown_half_life, |hours| span_h(hours.get()));
+        span_h(one.num_milliseconds() as f64 / 3_600_000.0 * number)
     }
 
     /// Active listed substances.
-    pub fn active(&self) -> impl Iterator<Item = (&'a Medicine, &Exposure)> {
+    pub fn active(&self) -> impl Iterator<Item = (&'a Medicine, &Exposure<'a>)> {
         let list: &'a MedicineList = self.list;
         self.exposures
             .iter()
@@ -404,12 +419,17 @@ impl<'a> View<'a> {
             .filter_map(move |(index, exposure)| Some((list.medicines().get(*index)?, exposure)))
     }
 
-    /// Results of an analyte, specimens up to a moment, oldest first.
+    /// Results of an analyte in this stay, specimens up to a moment, oldest first.
     fn results_of(&self, analyte: Analyte, before: At) -> Vec<ResultNow<'a>> {
+        let from = self.patient.stay_from(self.now);
         let mut found: Vec<_> = self
             .patient
             .results(self.now)
-            .filter(|now| now.result.analyte == analyte && now.collected <= before)
+            .filter(|now| {
+                now.result.analyte == analyte
+                    && now.collected <= before
+                    && from.is_none_or(|from| now.collected >= from)
+            })
             .collect();
         found.sort_by(|a, b| (a.collected, &a.result.id).cmp(&(b.collected, &b.result.id)));
         found
@@ -421,7 +441,7 @@ impl<'a> View<'a> {
         found.into_iter().rev().find(|now| now.result.value.is_some())
     }
 
-    /// When specimens of an electrolyte that gave a reliable number were taken.
+    /// When specimens of an electrolyte that gave a reliable number were taken, in this stay.
     pub fn collected(&self, of: Of) -> Vec<At> {
         self.results_of(of.analyte(), self.now)
             .into_iter()
@@ -508,10 +528,27 @@ impl<'a> View<'a> {
         }
     }
 
-    /// The latest creatinine, µmol/L.
-    pub fn creatinine(&self) -> Option<(f64, At)> {
+    /// The latest creatinine of this stay, µmol/L.
+    pub fn creatinine(&self) -> Option<(f64, At, &'a ResultId)> {
         let now = self.latest_result(Analyte::Creatinine)?;
-        Some((now.result.value?.number, now.collected))
+        Some((now.result.value?.number, now.collected, &now.result.id))
+    }
+
+    /// What a tracing or a result says as it holds now, so that a reading anew is seen to be another one.
+    pub fn says(&self, basis: &Basis) -> Option<String> {
+        match basis {
+            Basis::Tracing(id) => {
+                let reading = self.read(self.patient.tracing(id)?);
+                let by =
+                    reading.over_read_by.map_or(&*reading.recorded.tracing.engine, Person::as_str);
+                Some(format!("{:?} {:?} {:?} {by}", reading.qt, reading.rate, reading.quality))
+            }
+            Basis::Result(id) => {
+                let now = self.patient.results(self.now).find(|now| now.result.id == *id)?;
+                Some(format!("{:?} {:?}", now.result.value, now.result.specimen))
+            }
+            _ => None,
+        }
     }
 
     /// The latest tracing's identity.
@@ -520,10 +557,31 @@ impl<'a> View<'a> {
     }
 }
 
-impl Exposure {
+/// So many hours; at most some thirty thousand years, so that no moment runs out of the calendar.
+pub(crate) fn span_h(hours: f64) -> TimeDelta {
+    TimeDelta::milliseconds((hours * 3_600_000.0).clamp(-1e15, 1e15) as i64)
+}
+
+/// A dose or an order of one substance.
+enum Piece<'a> {
+    Dose(&'a Dose),
+    Order(OrderNow<'a>),
+}
+
+impl Piece<'_> {
+    fn key(&self) -> (At, &str) {
+        match self {
+            Piece::Dose(dose) => (dose.at, &dose.given.id),
+            Piece::Order(now) => (now.since, now.order.id.as_str()),
+        }
+    }
+}
+
+impl<'a> Exposure<'a> {
     fn since(at: At) -> Self {
         Self {
             started: at,
+            until: Some(at),
             doses: Vec::new(),
             orders: Vec::new(),
             dose_changed: None,
@@ -532,10 +590,34 @@ impl Exposure {
         }
     }
 
-    fn note_route(&mut self, route: Option<&str>) {
+    /// Adds a piece of the course, in the order of time.
+    fn add(&mut self, piece: &Piece<'a>, earlier_order: &mut Option<&'a Order>) {
+        match piece {
+            Piece::Dose(dose) => {
+                let other = |last: &&Dose| {
+                    (&last.given.dose, &last.given.route) != (&dose.given.dose, &dose.given.route)
+                };
+                if self.doses.last().is_some_and(other) {
+                    self.dose_changed = self.dose_changed.max(Some(dose.at));
+                }
+                self.note_route(dose.given.route.as_deref());
+                self.doses.push(dose);
+            }
+            Piece::Order(now) => {
+                // A change of dose comes as new content of the order, or as another order after it.
+                if earlier_order.is_some_and(|before| !same_amount(before, now.order)) {
+                    self.dose_changed = self.dose_changed.max(Some(now.since));
+                }
+                self.dose_changed = self.dose_changed.max(now.changed.filter(|at| *at > now.since));
+                *earlier_order = Some(now.order);
+            }
+        }
+    }
+
+    fn note_route(&mut self, route: Option<&'a str>) {
         if let Some(route) = route.map(str::trim).filter(|route| !route.is_empty()) {
             if !self.routes.iter().any(|known| known.eq_ignore_ascii_case(route)) {
-                self.routes.push(route.to_owned());
+                self.routes.push(route);
             }
         }
     }

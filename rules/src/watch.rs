@@ -78,8 +78,8 @@ struct Point {
 }
 
 fn of_watch(view: &View<'_>, watch: &Watch) -> Vec<Asked> {
-    let among = |names: &[String], own: &[String]| {
-        names.iter().any(|name| own.iter().any(|own| own.eq_ignore_ascii_case(name)))
+    let among = |names: &[toml::Spanned<String>], own: &[String]| {
+        names.iter().any(|name| own.iter().any(|own| own.eq_ignore_ascii_case(name.as_ref())))
     };
     let seen = seen(view, watch.asks_for);
     let mut found = Vec::new();
@@ -87,7 +87,7 @@ fn of_watch(view: &View<'_>, watch: &Watch) -> Vec<Asked> {
         let all =
             watch.evidence.is_empty() && watch.groups.is_empty() && watch.substances.is_empty();
         let meant = all
-            || watch.evidence.contains(&medicine.evidence)
+            || among(&watch.evidence, std::slice::from_ref(&medicine.evidence))
             || among(&watch.groups, &medicine.groups)
             || among(&watch.substances, std::slice::from_ref(&medicine.substance));
         if !meant {
@@ -119,10 +119,10 @@ fn of_watch(view: &View<'_>, watch: &Watch) -> Vec<Asked> {
             }
         }
         if let Some((n, after)) = watch.after_doses {
-            for (number, (given, _)) in exposure.doses.iter().take(n).enumerate() {
+            for (number, dose) in exposure.doses.iter().take(n).enumerate() {
                 points.push(Point {
-                    from: *given,
-                    due: *given + after,
+                    from: dose.at,
+                    due: dose.at + after,
                     why: format!("wanted after dose {}", number + 1),
                 });
             }

@@ -2,7 +2,7 @@
 
 use crate::correction::Formula;
 use crate::evaluate::of_word;
-use crate::fact::{At, Bound, Condition, Source};
+use crate::fact::{At, Bound, Condition, Dose, Source};
 use crate::medicines::Medicine;
 use crate::patient::ResultNow;
 use crate::protocol::condition::Of;
@@ -122,17 +122,34 @@ pub fn no_electrolyte(view: &View<'_>, of: Of) -> String {
     }
 }
 
+/// `5 mg IV`, as far as written.
+fn written(dose: Option<&Dose>, route: Option<&str>) -> String {
+    let dose = dose.map(|dose| format!("{} {}", dose.amount, dose.unit));
+    [dose, route.map(str::to_owned)].into_iter().flatten().collect::<Vec<_>>().join(" ")
+}
+
 /// A listed medicine with its evidence, dose and last administration.
-pub fn medicine(view: &View<'_>, medicine: &Medicine, exposure: &Exposure) -> String {
+pub fn medicine(view: &View<'_>, medicine: &Medicine, exposure: &Exposure<'_>) -> String {
     let mut parts = vec![medicine.substance.clone()];
-    if let Some((at, dose)) = exposure.doses.last() {
-        let dose = if dose.is_empty() { String::new() } else { format!("{dose}, ") };
-        parts.push(format!("last dose {dose}{} ({})", time(view, *at), ago(view, *at)));
+    if let Some(dose) = exposure.doses.last() {
+        let amount = written(dose.given.dose.as_ref(), dose.given.route.as_deref());
+        let amount = if amount.is_empty() { amount } else { format!("{amount}, ") };
+        parts.push(format!("last dose {amount}{} ({})", time(view, dose.at), ago(view, dose.at)));
     } else {
-        parts.push("ordered, no administration known".into());
+        let order = if exposure.orders.is_empty() { "was ordered" } else { "ordered" };
+        parts.push(format!("{order}, no administration known"));
     }
-    if !exposure.orders.is_empty() {
-        parts.push(format!("order: {}", exposure.orders.join("; ")));
+    let orders: Vec<String> = exposure
+        .orders
+        .iter()
+        .map(|order| {
+            let amount = written(order.dose.as_ref(), order.route.as_deref());
+            [amount.as_str(), order.frequency.as_deref().unwrap_or("")].join(" ").trim().to_owned()
+        })
+        .filter(|order| !order.is_empty())
+        .collect();
+    if !orders.is_empty() {
+        parts.push(format!("order: {}", orders.join("; ")));
     }
     parts.push(format!("since {}", time(view, exposure.started)));
     if let Some(evidence) = view.list.evidence.get(&medicine.evidence) {

@@ -2,15 +2,16 @@
 
 use super::life::{Outcome, Signature};
 use super::{Decider, Due, Key};
-use crate::alert::Decision;
+use crate::alert::{Decision, Evidence};
 use crate::evaluate::evaluate;
 use crate::evidence;
 use crate::fact::At;
-use crate::ids::PatientId;
-use crate::protocol::Rule;
+use crate::ids::{PatientId, Ward};
+use crate::patient::Patient;
+use crate::protocol::{Protocol, Rule};
 use crate::verdict::{Basis, Because, Verdict};
 use crate::view::View;
-use std::collections::{BTreeMap, BTreeSet};
+use std::collections::BTreeMap;
 
 /// What a rule says of a patient.
 #[derive(Debug)]
@@ -21,6 +22,8 @@ pub struct RuleSays<'p> {
     pub verdict: Verdict,
     /// The tier's rank that the protocol gives this answer; `None`: shown only, or quiet.
     pub rank: Option<usize>,
+    /// What was missing to tell whether the rule is meant for this patient; it was asked all the same.
+    pub guard_missing: Vec<Box<str>>,
 }
 
 /// Asks every rule of the protocol.
@@ -30,24 +33,28 @@ pub fn ask<'p>(view: &View<'p>) -> Vec<RuleSays<'p>> {
         .rules
         .iter()
         .map(|rule| {
-            let meant = rule.only_if.as_ref().map(|only_if| evaluate(only_if, view));
             // A guard that can't be told does not keep the rule from being asked: absence of data is never safety.
-            let verdict = match meant {
-                Some(Verdict::Quiet) => Verdict::Quiet,
-                Some(Verdict::Fired(_) | Verdict::CannotTell(_)) | None => {
-                    evaluate(&rule.when, view)
-                }
+            let (verdict, guard_missing) =
+                match rule.only_if.as_ref().map(|only_if| evaluate(only_if, view)) {
+                    Some(Verdict::Quiet) => (Verdict::Quiet, Vec::new()),
+                    Some(Verdict::CannotTell(missing)) => {
+                        (evaluate(&rule.when, view), missing.what)
+                    }
+                    Some(Verdict::Fired(_)) | None => (evaluate(&rule.when, view), Vec::new()),
+                };
+            // A wide-QRS estimate alone never reaches the highest tier, borderline or not.
+            let capped = |tier: usize, because: &Because| {
+                if because.wide { tier.min(protocol.wide_qrs_tier) } else { tier }
             };
             let rank = match &verdict {
-                Verdict::Fired(because) if because.wide => {
-                    Some(rule.tier.min(protocol.wide_qrs_tier))
+                Verdict::Fired(because) => Some(capped(rule.tier, because)),
+                Verdict::CannotTell(missing) if missing.borderline => {
+                    rule.borderline.map(|tier| capped(tier, &missing.because))
                 }
-                Verdict::Fired(_) => Some(rule.tier),
-                Verdict::CannotTell(missing) if missing.borderline => rule.borderline,
                 Verdict::CannotTell(_) => rule.cannot_tell,
                 Verdict::Quiet => None,
             };
-            RuleSays { rule, verdict, rank }
+            RuleSays { rule, verdict, rank, guard_missing }
         })
         .collect()
 }
@@ -56,15 +63,47 @@ pub fn ask<'p>(view: &View<'p>) -> Vec<RuleSays<'p>> {
 pub fn unknown(says: &[RuleSays<'_>]) -> Vec<Box<str>> {
     let mut found: Vec<Box<str>> = Vec::new();
     for said in says {
-        if let Verdict::CannotTell(missing) = &said.verdict {
-            for what in &missing.what {
-                if !found.contains(what) {
-                    found.push(what.clone());
-                }
+        let of_rule = match &said.verdict {
+            Verdict::CannotTell(missing) => missing.what.as_slice(),
+            Verdict::Fired(_) | Verdict::Quiet => &[],
+        };
+        let guard = if matches!(said.verdict, Verdict::Quiet) { &[] } else { &*said.guard_missing };
+        for what in of_rule.iter().chain(guard) {
+            if !found.contains(what) {
+                found.push(what.clone());
             }
         }
     }
     found
+}
+
+/// Of each concern the rule that speaks: the highest tier; of equal tiers the certain one, and of those the one that
+/// stands first in the file.
+pub fn by_concern<'s, 'p>(says: &'s [RuleSays<'p>]) -> BTreeMap<&'p str, &'s RuleSays<'p>> {
+    let weight = |said: &RuleSays<'_>| (said.rank, matches!(said.verdict, Verdict::Fired(_)));
+    let mut found: BTreeMap<&str, &RuleSays<'_>> = BTreeMap::new();
+    for said in says.iter().filter(|said| said.rank.is_some()) {
+        let best = found.entry(&said.rule.concern).or_insert(said);
+        if weight(said) > weight(best) {
+            *best = said;
+        }
+    }
+    found
+}
+
+/// What one look at a patient gave.
+struct Look {
+    ward: Option<Ward>,
+    /// What is to be said of each concern that holds.
+    concerns: BTreeMap<String, Said>,
+    next: Option<At>,
+}
+
+struct Said {
+    rank: usize,
+    signature: Signature,
+    /// Worked out only where it is news.
+    evidence: Option<Evidence>,
 }
 
 impl Decider {
@@ -77,72 +116,74 @@ impl Decider {
         out: &mut Vec<Decision>,
     ) {
         let Some(protocol) = self.protocol.clone() else { return };
-        let list = self.list.clone();
-        let Some(whole) = self.whole(patient).map(std::borrow::Cow::into_owned) else { return };
-        if whole.gone(at) {
+        let look = match self.whole(patient) {
+            None => return,
+            Some(whole) if whole.gone(at) => None,
+            Some(whole) => Some(self.look(&whole, &protocol, patient, at)),
+        };
+        let Some(look) = look else {
             self.close_all(patient, "the patient has left", at, out);
-            self.look_again(patient, None);
+            let next = self.whole(patient).and_then(|whole| whole.next_after(at));
+            self.look_again(patient, next);
             return;
-        }
-        let view = View::new(&whole, &protocol, &list, at);
-        let says = ask(&view);
-        let unknown = unknown(&says);
-        let mut by_concern: BTreeMap<&str, &RuleSays<'_>> = BTreeMap::new();
-        for said in &says {
-            // Of equal tiers the certain one speaks, and of those the one that stands first in the file.
-            let weight =
-                |said: &RuleSays<'_>| (said.rank, matches!(said.verdict, Verdict::Fired(_)));
-            let best = by_concern.entry(&said.rule.concern).or_insert(said);
-            if weight(said) > weight(best) {
-                *best = said;
-            }
-        }
-        let ward = whole.place(at).map(|place| place.ward.clone());
-        let mut concerns: BTreeSet<String> = self
-            .open
-            .keys()
-            .filter(|(whose, _)| whose.as_ref() == Some(patient))
-            .map(|(_, concern)| concern.clone())
+        };
+        let over: Vec<Key> = self
+            .keys_of(patient)
+            .filter(|(_, concern)| !look.concerns.contains_key(concern))
+            .cloned()
             .collect();
-        concerns.extend(by_concern.keys().map(|concern| (*concern).to_owned()));
-        for concern in concerns {
+        for key in over {
+            self.over(&key, corrects, at, out);
+        }
+        self.settled.retain(|(whose, concern), _| {
+            whose.as_ref() != Some(patient) || look.concerns.contains_key(concern)
+        });
+        for (concern, said) in look.concerns {
+            let Said { rank, signature, evidence } = said;
+            let Some(evidence) = evidence else { continue };
             let key: Key = (Some(patient.clone()), concern);
-            let said = by_concern.get(key.1.as_str()).filter(|said| said.rank.is_some());
-            let Some((said, rank)) = said.and_then(|said| Some((said, said.rank?))) else {
-                self.settled.remove(&key);
-                self.over(&key, corrects, at, out);
-                continue;
-            };
-            let (because, told_not): (Because, Vec<Box<str>>) = match &said.verdict {
-                Verdict::Fired(because) => (because.clone(), Vec::new()),
-                Verdict::CannotTell(missing) => (
-                    Because { borderline: missing.borderline, ..missing.because.clone() },
-                    missing.what.clone(),
-                ),
-                Verdict::Quiet => continue,
-            };
-            let signature = Signature {
-                rule: said.rule.id.clone(),
-                rank,
-                borderline: because.borderline,
-                certain: told_not.is_empty(),
-                rests_on: because.rests_on.clone(),
-            };
-            if let Some(settled) = self.settled.get(&key) {
-                if rank <= settled.rank && signature.rests_on.is_subset(&settled.rests_on) {
-                    continue; // a person closed it on these very facts
-                }
-                self.settled.remove(&key);
-            }
-            let evidence = evidence::of_rule(&view, said.rule, &because, rank, &told_not, &unknown);
-            let outcome = Outcome { rank, signature, evidence, ward: ward.clone() };
+            self.settled.remove(&key);
+            let outcome = Outcome { rank, signature, evidence, ward: look.ward.clone() };
             if self.open.contains_key(&key) {
                 self.change(&key, outcome, at, out);
             } else {
                 self.raise(key, outcome, None, at, out);
             }
         }
-        self.look_again(patient, view.next_change());
+        self.look_again(patient, look.next);
+    }
+
+    fn look(&self, whole: &Patient, protocol: &Protocol, patient: &PatientId, at: At) -> Look {
+        let view = View::new(whole, protocol, &self.list, at);
+        let says = ask(&view);
+        let mut concerns = BTreeMap::new();
+        for (concern, said) in by_concern(&says) {
+            let Some((because, told_not, rank)) = reasons(said) else { continue };
+            let signature = signature(&view, said.rule, &because, rank, told_not.is_empty());
+            let key: Key = (Some(patient.clone()), concern.to_owned());
+            let known = self.open.get(&key).is_some_and(|open| open.signature == signature);
+            // A person closed it on these very facts: the same ones don't open it again.
+            let settled = self.settled.get(&key).is_some_and(|settled| settled.covers(&signature));
+            let evidence = (!known && !settled).then(|| {
+                evidence::of_rule(&view, said.rule, &because, rank, &told_not, &unknown(&says))
+            });
+            concerns.insert(key.1, Said { rank, signature, evidence });
+        }
+        let ward = whole.place(at).map(|place| place.ward.clone());
+        Look { ward, concerns, next: view.next_change() }
+    }
+
+    /// The evidence of an open alert as of a moment: ages as the reader will find them. `None` for technical alerts, and
+    /// where the concern no longer holds.
+    pub(super) fn fresh(&self, key: &Key, at: At) -> Option<Evidence> {
+        let (Some(patient), concern) = key else { return None };
+        let protocol = self.protocol.as_ref()?;
+        let whole = self.whole(patient)?;
+        let view = View::new(&whole, protocol, &self.list, at);
+        let says = ask(&view);
+        let said = by_concern(&says).remove(concern.as_str())?;
+        let (because, told_not, rank) = reasons(said)?;
+        Some(evidence::of_rule(&view, said.rule, &because, rank, &told_not, &unknown(&says)))
     }
 
     /// Nothing holds any more: over, or withdrawn where the very fact that it rested on was corrected.
@@ -152,12 +193,13 @@ impl Decider {
         let because = match corrects {
             Some(Basis::Result(_)) if disproved => "the result that it rested on was corrected",
             Some(Basis::Tracing(_)) if disproved => "the tracing that it rested on was read anew",
+            Some(_) if disproved => "what it rested on was recorded by mistake",
             _ => "newer facts: the rule does not hold any more",
         };
         self.end(key, disproved, because, at, out);
     }
 
-    fn look_again(&mut self, patient: &PatientId, at: Option<At>) {
+    pub(super) fn look_again(&mut self, patient: &PatientId, at: Option<At>) {
         if let Some(known) = self.look.remove(patient) {
             self.due.remove(&(known, Due::Look(patient.clone())));
         }
@@ -165,5 +207,35 @@ impl Decider {
             self.look.insert(patient.clone(), at);
             self.due.insert((at, Due::Look(patient.clone())));
         }
+    }
+}
+
+/// Why a rule speaks, what it can't tell, and at which rank; `None` where it is quiet.
+fn reasons(said: &RuleSays<'_>) -> Option<(Because, Vec<Box<str>>, usize)> {
+    let rank = said.rank?;
+    match &said.verdict {
+        Verdict::Fired(because) => Some((because.clone(), Vec::new(), rank)),
+        Verdict::CannotTell(missing) => {
+            let because = Because { borderline: missing.borderline, ..missing.because.clone() };
+            Some((because, missing.what.clone(), rank))
+        }
+        Verdict::Quiet => None,
+    }
+}
+
+fn signature(
+    view: &View<'_>,
+    rule: &Rule,
+    because: &Because,
+    rank: usize,
+    certain: bool,
+) -> Signature {
+    Signature {
+        rule: rule.id.clone(),
+        rank,
+        borderline: because.borderline,
+        certain,
+        says: because.rests_on.iter().filter_map(|basis| view.says(basis)).collect(),
+        rests_on: because.rests_on.clone(),
     }
 }

@@ -27,6 +27,8 @@ pub(super) struct OpenAlert {
     /// When the next role is told, a snooze ends or quiet hours end.
     deadline: Option<(At, Awaits)>,
     told: Vec<(Role, Vec<Private>)>,
+    /// Recipients who can't be reached.
+    refused: BTreeSet<Private>,
 }
 
 /// What would be a change worth storing.
@@ -36,6 +38,8 @@ pub(super) struct Signature {
     pub rank: usize,
     pub borderline: bool,
     pub certain: bool,
+    /// What tracings and results that it rests on say now: read anew, they may say something else.
+    pub says: Vec<String>,
     pub rests_on: BTreeSet<Basis>,
 }
 
@@ -80,7 +84,7 @@ impl Decider {
         at: At,
         out: &mut Vec<Decision>,
     ) {
-        let Some(protocol) = self.protocol.clone() else { return };
+        let protocol = self.book();
         let Some(tier) = protocol.tiers.get(outcome.rank) else { return };
         let alert = Alert {
             id: self.alert_id(&key, at),
@@ -106,6 +110,7 @@ impl Decider {
             escalations: 0,
             deadline: None,
             told: Vec::new(),
+            refused: BTreeSet::new(),
         };
         let roles = tell.unwrap_or_else(|| tier.tell.clone());
         open.tell(&protocol, roles, NoticeReason::Raised, at, out);
@@ -114,7 +119,7 @@ impl Decider {
 
     /// Gives an open alert its newer evidence; a risen tier is told anew.
     pub(super) fn change(&mut self, key: &Key, outcome: Outcome, at: At, out: &mut Vec<Decision>) {
-        let Some(protocol) = self.protocol.clone() else { return };
+        let protocol = self.book();
         let Some(mut open) = self.open.remove(key) else { return };
         self.forget_deadline(&open);
         let rose = outcome.rank > open.rank;
@@ -137,10 +142,19 @@ impl Decider {
                 out.push(Decision::Changed(Box::new(open.alert.clone())));
                 open.tell(&protocol, tier.tell.clone(), NoticeReason::TierRaised, at, out);
             } else if changed {
-                if fell && matches!(open.deadline, Some((_, Awaits::Answer))) {
-                    open.deadline = tier.answer_within.map(|within| (at + within, Awaits::Answer));
-                }
                 out.push(Decision::Changed(Box::new(open.alert.clone())));
+                match &open.deadline {
+                    Some((_, Awaits::Answer)) if fell => {
+                        open.deadline =
+                            tier.answer_within.map(|within| (at + within, Awaits::Answer));
+                    }
+                    // Nobody was told yet: the lower tier's people are, in the lower tier's time.
+                    Some((_, Awaits::QuietEnd(_, reason))) if fell => {
+                        let reason = reason.clone();
+                        open.tell(&protocol, tier.tell.clone(), reason, at, out);
+                    }
+                    _ => {}
+                }
             }
         }
         self.keep(key.clone(), open);
@@ -156,7 +170,7 @@ impl Decider {
         at: At,
         out: &mut Vec<Decision>,
     ) {
-        let Some(protocol) = self.protocol.clone() else { return };
+        let protocol = self.book();
         let Some(mut open) = self.open.remove(key) else { return };
         self.forget_deadline(&open);
         open.alert.state = if withdrawn { AlertState::Withdrawn } else { AlertState::Closed };
@@ -184,12 +198,7 @@ impl Decider {
         at: At,
         out: &mut Vec<Decision>,
     ) {
-        let keys: Vec<Key> = self
-            .open
-            .keys()
-            .filter(|(whose, _)| whose.as_ref() == Some(patient))
-            .cloned()
-            .collect();
+        let keys: Vec<Key> = self.keys_of(patient).cloned().collect();
         for key in keys {
             self.end(&key, false, because, at, out);
         }
@@ -206,7 +215,7 @@ impl Decider {
         out: &mut Vec<Decision>,
     ) {
         let key: Key = (None, concern.to_owned());
-        let Some(protocol) = self.protocol.clone() else { return };
+        let protocol = self.book();
         if self.open.contains_key(&key) {
             return;
         }
@@ -215,6 +224,7 @@ impl Decider {
             rank: protocol.technical.tier,
             borderline: false,
             certain: true,
+            says: Vec::new(),
             rests_on: BTreeSet::new(),
         };
         let evidence = evidence::technical(&protocol, what, because);
@@ -235,10 +245,8 @@ impl Decider {
 
     /// Runs something on the alert that a fact names; one that is over stays over.
     fn with(&mut self, id: &AlertId, act: impl FnOnce(&mut OpenAlert, &Protocol)) {
-        let (Some(protocol), Some(key)) = (self.protocol.clone(), self.by_id.get(id).cloned())
-        else {
-            return;
-        };
+        let protocol = self.book();
+        let Some(key) = self.by_id.get(id).cloned() else { return };
         let current = self.open.get(&key).is_some_and(|open| open.alert.id == *id);
         if let Some(mut open) = current.then(|| self.open.remove(&key)).flatten() {
             self.forget_deadline(&open);
@@ -255,12 +263,17 @@ impl Decider {
         out: &mut Vec<Decision>,
     ) {
         self.with(id, |open, _| {
-            open.life(at, LifeStep::Told { recipient: recipient.clone() }, out)
+            open.refused.remove(recipient);
+            open.life(at, LifeStep::Told { recipient: recipient.clone() }, out);
         });
-        self.technical_over("refused recipient", "a message was taken again", at, out);
+        if self.refused.remove(recipient) && self.refused.is_empty() {
+            let because = "every recipient that was refused has been reached again";
+            self.technical_over("refused recipient", because, at, out);
+        }
     }
 
-    /// A recipient who can never be reached is as good as one who doesn't answer: the next role is told at once.
+    /// A recipient who can never be reached is as good as one who doesn't answer: where nobody else was told, the next
+    /// role is told at once.
     pub(super) fn unreachable(
         &mut self,
         id: &AlertId,
@@ -268,10 +281,12 @@ impl Decider {
         at: At,
         out: &mut Vec<Decision>,
     ) {
+        self.refused.insert(recipient.clone());
         self.with(id, |open, protocol| {
             open.life(at, LifeStep::Refused { recipient: recipient.clone() }, out);
-            let reached =
-                open.told.iter().any(|(_, others)| others.iter().any(|other| other != recipient));
+            open.refused.insert(recipient.clone());
+            let mut told = open.told.iter().flat_map(|(_, recipients)| recipients);
+            let reached = told.any(|other| !open.refused.contains(other));
             if open.alert.state == AlertState::Open && !reached {
                 open.escalate(protocol, at, out);
             }
@@ -318,7 +333,11 @@ impl Decider {
         self.with(id, |open, protocol| {
             open.alert.state = AlertState::Open;
             open.life(at, LifeStep::HandedOver { by: by.as_str().into(), to: to.clone() }, out);
-            open.tell(protocol, vec![to.clone()], NoticeReason::HandedOver, at, out);
+            // A role that the roster doesn't reach would be nobody: then the tier's own people are told.
+            let nobody = protocol.recipients(to, open.ward.as_ref(), at).is_empty();
+            let own = protocol.tiers.get(open.rank).map(|tier| tier.tell.clone());
+            let roles = own.filter(|_| nobody).unwrap_or_else(|| vec![to.clone()]);
+            open.tell(protocol, roles, NoticeReason::HandedOver, at, out);
         });
     }
 
@@ -335,12 +354,14 @@ impl Decider {
             self.forget_deadline(&open);
             open.alert.state = AlertState::Closed;
             open.life(at, step, out);
-            self.settled.insert(key, Settled { rank: open.rank, rests_on: open.rests_on });
+            let Signature { says, rests_on, .. } = open.signature;
+            self.settled.insert(key, Settled { rank: open.rank, says, rests_on });
         }
     }
 
-    /// An alert's own deadline.
+    /// An alert's own deadline. Who is told then reads what holds then.
     pub(super) fn alert_due(&mut self, id: &AlertId, at: At, out: &mut Vec<Decision>) {
+        self.freshen(id, at);
         self.with(id, |open, protocol| match open.deadline.take() {
             Some((due, awaits)) if due <= at => match awaits {
                 Awaits::Answer => open.escalate(protocol, at, out),
@@ -354,6 +375,44 @@ impl Decider {
             },
             other => open.deadline = other,
         });
+    }
+
+    fn freshen(&mut self, id: &AlertId, at: At) {
+        let Some(key) = self.by_id.get(id).cloned() else { return };
+        let Some(evidence) = self.fresh(&key, at) else { return };
+        if let Some(open) = self.open.get_mut(&key).filter(|open| open.alert.id == *id) {
+            open.alert.evidence = evidence;
+            open.alert.as_of = at;
+        }
+    }
+
+    /// Carries open alerts over to another protocol: each to the tier of the same name, else to one of its height. An
+    /// alert that waits for nobody, where the new tier wants an answer, waits for one from now on.
+    pub(super) fn carry_over(&mut self, at: At, out: &mut Vec<Decision>) {
+        let protocol = self.book();
+        let highest = protocol.tiers.len().saturating_sub(1);
+        let keys: Vec<Key> = self.open.keys().cloned().collect();
+        for key in keys {
+            let Some(mut open) = self.open.remove(&key) else { continue };
+            self.forget_deadline(&open);
+            let technical = key.0.is_none().then_some(protocol.technical.tier);
+            let named = protocol.tiers.iter().position(|tier| tier.name == open.alert.tier);
+            open.rank = technical.or(named).unwrap_or(open.rank).min(highest);
+            open.signature.rank = open.rank;
+            if let Some(tier) = protocol.tiers.get(open.rank) {
+                open.alert.tier = tier.name.clone();
+                open.alert.tier_rank = u32::try_from(open.rank).unwrap_or(u32::MAX);
+                if open.deadline.is_none() && open.alert.state == AlertState::Open {
+                    open.deadline = tier.answer_within.map(|within| (at + within, Awaits::Answer));
+                }
+            }
+            if technical.is_some() && open.told.is_empty() {
+                // Raised when no protocol said whom to tell.
+                let tell = protocol.technical.tell.clone();
+                open.tell(&protocol, tell, NoticeReason::Raised, at, out);
+            }
+            self.keep(key, open);
+        }
     }
 
     fn keep(&mut self, key: Key, open: OpenAlert) {

@@ -5,17 +5,18 @@
 mod concern;
 mod life;
 
-pub use concern::{RuleSays, ask, unknown};
+pub use concern::{RuleSays, ask, by_concern, unknown};
 
 use crate::alert::{Decision, LifeStep};
 use crate::fact::{At, Body, Fact, Feed};
+use crate::finding::Finding;
 use crate::ids::{AlertId, ContentHash, PatientId, Private};
-use crate::medicines::MedicineList;
+use crate::medicines::{MedicineList, Recognised};
 use crate::patient::Patient;
 use crate::protocol::Protocol;
 use crate::verdict::Basis;
 use crate::view::View;
-use life::OpenAlert;
+use life::{OpenAlert, Signature};
 use std::collections::{BTreeMap, BTreeSet};
 use std::sync::Arc;
 
@@ -33,6 +34,7 @@ type Key = (Option<PatientId>, String);
 pub struct Decider {
     protocol: Option<Arc<Protocol>>,
     list: Arc<MedicineList>,
+    list_in_force: bool,
     patients: BTreeMap<PatientId, Patient>,
     /// A merged number and the one that goes on.
     merged: BTreeMap<PatientId, PatientId>,
@@ -42,14 +44,29 @@ pub struct Decider {
     settled: BTreeMap<Key, Settled>,
     /// Whom to look at again when nothing but time has passed.
     look: BTreeMap<PatientId, At>,
+    /// When each feed was last heard, or first expected.
     heard: BTreeMap<Feed, At>,
+    /// When a feed will have been silent for too long.
+    feed_due: BTreeMap<Feed, At>,
+    /// Recipients whom no message reaches.
+    refused: BTreeSet<Private>,
     due: BTreeSet<(At, Due)>,
 }
 
 #[derive(Debug, Clone)]
 struct Settled {
     rank: usize,
+    says: Vec<String>,
     rests_on: BTreeSet<Basis>,
+}
+
+impl Settled {
+    /// Whether this is no more than what the person knew who closed it.
+    fn covers(&self, now: &Signature) -> bool {
+        now.rank <= self.rank
+            && now.rests_on.is_subset(&self.rests_on)
+            && now.says.iter().all(|says| self.says.contains(says))
+    }
 }
 
 /// What is due.
@@ -105,18 +122,25 @@ impl Decider {
         self.hear(fact, at, &mut out);
         match &fact.body {
             Body::ProtocolInForce(hash) => {
-                self.put_in_force(hash, texts, at, &mut out, |decider, text| {
-                    decider.protocol =
-                        Some(Arc::new(Protocol::parse(text).map_err(|found| found.len())?));
-                    Ok(())
-                })
+                if let Some(protocol) =
+                    self.book_of("protocol", hash, texts, at, &mut out, Protocol::parse)
+                {
+                    self.protocol = Some(Arc::new(protocol));
+                    self.technical_over("protocol", "a good one is in force", at, &mut out);
+                    self.carry_over(at, &mut out);
+                    self.expect_feeds(at);
+                    self.look_at_all(at, &mut out);
+                }
             }
             Body::MedicinesInForce(hash) => {
-                self.put_in_force(hash, texts, at, &mut out, |decider, text| {
-                    decider.list =
-                        Arc::new(MedicineList::parse(text).map_err(|found| found.len())?);
-                    Ok(())
-                })
+                if let Some(list) =
+                    self.book_of("medicine list", hash, texts, at, &mut out, MedicineList::parse)
+                {
+                    self.list = Arc::new(list);
+                    self.list_in_force = true;
+                    self.technical_over("medicine list", "a good one is in force", at, &mut out);
+                    self.look_at_all(at, &mut out);
+                }
             }
             // Local codes were applied when a file was read; the fact records which ones.
             Body::CodesInForce(_) => {}
@@ -168,8 +192,34 @@ impl Decider {
             }
             Body::OverRead(read) => Some(Basis::Tracing(read.tracing.clone())),
             Body::TracingWithdrawn(id) => Some(Basis::Tracing(id.clone())),
+            Body::NotGiven { administration } => {
+                let dose = known.dose(administration)?;
+                self.substance(&dose.given.medicine)
+            }
+            Body::OrderCancelled(id) => self.substance(&known.order(id)?.medicine),
             _ => None,
         }
+    }
+
+    fn substance(&self, medicine: &crate::fact::MedicineName) -> Option<Basis> {
+        match self.list.recognise(medicine) {
+            Recognised::Listed(found) => {
+                let medicine = self.list.medicines().get(*found.first()?)?;
+                Some(Basis::Medicine(medicine.substance.as_str().into()))
+            }
+            Recognised::No => Some(Basis::Said(medicine.text.clone())),
+            Recognised::LeftOut => None,
+        }
+    }
+
+    /// Open alerts of one patient.
+    fn keys_of(&self, patient: &PatientId) -> impl Iterator<Item = &Key> {
+        let first: Key = (Some(patient.clone()), String::new());
+        let of = patient.clone();
+        self.open
+            .range(first..)
+            .map(|(key, _)| key)
+            .take_while(move |(whose, _)| whose.as_ref() == Some(&of))
     }
 
     /// The number under which a merged record goes on.
@@ -247,38 +297,57 @@ impl Decider {
         }
     }
 
-    /// Puts a text in force, or says that it can't be; the last good one stays.
-    fn put_in_force(
+    /// Reads a text that is to come in force, or says that it can't be; the last good one stays.
+    fn book_of<T>(
         &mut self,
+        what: &str,
         hash: &ContentHash,
         texts: &dyn Texts,
         at: At,
         out: &mut Vec<Decision>,
-        take: impl FnOnce(&mut Self, &str) -> Result<(), usize>,
-    ) {
-        let refused = match texts.text(hash) {
-            None => Some(format!("the text {} is not in the store", hash.short())),
-            Some(text) => match take(self, text) {
-                Ok(()) => None,
-                Err(mistakes) => Some(format!("the text {} has {mistakes} mistakes", hash.short())),
+        parse: impl FnOnce(&str) -> Result<T, Vec<Finding>>,
+    ) -> Option<T> {
+        let why = match texts.text(hash).map(parse) {
+            Some(Ok(book)) => return Some(book),
+            None => format!("the text {} is not in the store", hash.short()),
+            Some(Err(found)) => match found.first() {
+                Some(first) => {
+                    format!(
+                        "the text {} has {} mistakes; the first: {first}",
+                        hash.short(),
+                        found.len()
+                    )
+                }
+                None => format!("the text {} can't be read", hash.short()),
             },
         };
-        match refused {
-            Some(why) => self.technical(
-                "rule books",
-                "A protocol or medicine list could not be put in force; the last good one stays.",
-                &why,
-                at,
-                out,
-            ),
-            None => {
-                self.technical_over("rule books", "a good one is in force", at, out);
-                let everyone: Vec<PatientId> = self.patients().cloned().collect();
-                for patient in everyone {
-                    self.look_at(&patient, at, None, out);
-                }
+        let seen = format!("A new {what} could not be put in force; the last good one stays.");
+        self.technical(what, &seen, &why, at, out);
+        None
+    }
+
+    /// What changes for everyone: another protocol or list. What the one names and the other doesn't know is said.
+    fn look_at_all(&mut self, at: At, out: &mut Vec<Decision>) {
+        if let Some(protocol) = self.protocol.clone().filter(|_| self.list_in_force) {
+            let strangers = protocol.not_on(&self.list);
+            let names: Vec<String> = strangers.iter().map(|found| found.message.clone()).collect();
+            if names.is_empty() {
+                self.technical_over("rule books", "protocol and list agree again", at, out);
+            } else {
+                let seen = "The protocol names something that the medicine list doesn't know: a rule may never fire.";
+                self.technical("rule books", seen, &names.join("; "), at, out);
             }
         }
+        let everyone: Vec<PatientId> = self.patients().cloned().collect();
+        for patient in everyone {
+            self.look_at(&patient, at, None, out);
+        }
+    }
+
+    /// The protocol in force, or one that knows no rule, no role and no time, so that trouble is seen before the first
+    /// protocol came.
+    fn book(&self) -> Arc<Protocol> {
+        self.protocol.clone().unwrap_or_else(|| Arc::new(Protocol::none()))
     }
 
     /// A feed is heard when a fact of its kind comes out of a file.
@@ -293,21 +362,36 @@ impl Decider {
         };
         self.heard.insert(feed, at);
         self.feed_is(feed, false, at, out);
-        if let Some(after) =
-            self.protocol.as_ref().and_then(|protocol| protocol.silent_after.get(&feed))
-        {
-            self.due.insert((at + *after, Due::Feed(feed)));
+        self.expect(feed);
+    }
+
+    /// From the day a protocol asks for a feed, its silence counts, also if it was never heard.
+    fn expect_feeds(&mut self, at: At) {
+        for feed in [Feed::Tracings, Feed::Results, Feed::Medicines] {
+            let asked = |protocol: &Arc<Protocol>| protocol.silent_after.contains_key(&feed);
+            if self.protocol.as_ref().is_some_and(asked) {
+                self.heard.entry(feed).or_insert(at);
+            }
+            self.expect(feed);
+        }
+    }
+
+    /// Sets the moment at which a feed will have been silent for too long.
+    fn expect(&mut self, feed: Feed) {
+        if let Some(known) = self.feed_due.remove(&feed) {
+            self.due.remove(&(known, Due::Feed(feed)));
+        }
+        let after = self.protocol.as_ref().and_then(|protocol| protocol.silent_after.get(&feed));
+        if let (Some(heard), Some(after)) = (self.heard.get(&feed), after) {
+            let at = *heard + *after;
+            self.feed_due.insert(feed, at);
+            self.due.insert((at, Due::Feed(feed)));
         }
     }
 
     fn feed_due(&mut self, feed: Feed, at: At, out: &mut Vec<Decision>) {
-        let after =
-            self.protocol.as_ref().and_then(|protocol| protocol.silent_after.get(&feed)).copied();
-        if let (Some(after), Some(heard)) = (after, self.heard.get(&feed).copied()) {
-            if heard + after <= at {
-                self.feed_is(feed, true, at, out);
-            }
-        }
+        self.feed_due.remove(&feed);
+        self.feed_is(feed, true, at, out);
     }
 
     fn feed_is(&mut self, feed: Feed, silent: bool, at: At, out: &mut Vec<Decision>) {

@@ -5,9 +5,8 @@ use super::{row, yes};
 use crate::fact::Bound;
 use crate::protocol::condition::{ElectrolyteIs, ElectrolyteStateIs, LowCalcium, Of, State};
 use crate::verdict::{Basis, Verdict};
-use crate::view::{Electrolyte, View};
+use crate::view::{Electrolyte, View, span_h};
 use crate::words;
-use chrono::TimeDelta;
 
 /// The name on a page.
 pub(crate) fn of_word(of: Of) -> &'static str {
@@ -98,7 +97,7 @@ fn falling(view: &View<'_>, of: Of, now: &Electrolyte, by: f64, within_h: f64) -
     if now.unreliable {
         return hidden(view, name, now);
     }
-    let earliest = now.collected - TimeDelta::milliseconds((within_h * 3_600_000.0) as i64);
+    let earliest = now.collected - span_h(within_h);
     let earlier = view.electrolytes_between(of, earliest, now.collected);
     let reliable = earlier.into_iter().filter(|then| !then.unreliable);
     let Some(then) = reliable.max_by(|a, b| a.value.total_cmp(&b.value)) else {

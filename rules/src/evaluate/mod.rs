@@ -10,14 +10,16 @@ use crate::alert::EvidenceRow;
 use crate::correction::Formula;
 use crate::fact::{At, Quality, Rhythm, Sex};
 use crate::medicines::Medicine;
-use crate::protocol::LimitBySex;
 use crate::protocol::condition::{
-    By, Condition, Limit, Medicines, Over, QtcIs, QtcRise, RateIs, RiskIs, RiskState, TracingIs,
+    By, Condition, IntervalMs, Limit, Medicines, Over, QtcIs, QtcRise, RateIs, RiskIs, RiskState,
+    TracingIs,
 };
+use crate::protocol::{LimitBySex, LimitFrom};
 use crate::verdict::{Basis, Because, Missing, Verdict};
-use crate::view::{Exposure, Reading, View};
+use crate::view::{Exposure, Reading, View, span_h};
 use crate::{kidney, watch, wide, words};
 use chrono::TimeDelta;
+use std::collections::BTreeSet;
 use toml::Spanned;
 
 /// Under this age a tracing is measured and not graded.
@@ -58,7 +60,7 @@ pub fn evaluate(condition: &Condition, view: &View<'_>) -> Verdict {
             yes(
                 found.len() >= is.at_least,
                 || row("not on the medicine list", &names, "", None, "medicine feed"),
-                [],
+                found.iter().map(|name| Basis::Said((*name).into())),
             )
         }
         Condition::Electrolyte(is) => electrolyte::limit(view, is),
@@ -167,12 +169,21 @@ fn above(
     }
 }
 
-/// The limit that holds for this patient: the stricter one where the sex is not known.
+/// The limit that holds for this patient: the strictest that may be theirs where sex or age is not known.
 pub(crate) fn limit_for(view: &View<'_>, limit: &LimitBySex) -> f64 {
-    match view.sex() {
-        Some(Sex::Female) => limit.female_ms.0,
-        Some(Sex::Male) => limit.male_ms.0,
-        Some(Sex::Other) | None => limit.female_ms.0.min(limit.male_ms.0),
+    let of_sex = |female: IntervalMs, male: IntervalMs| match view.sex() {
+        Some(Sex::Female) => female.0,
+        Some(Sex::Male) => male.0,
+        Some(Sex::Other) | None => female.0.min(male.0),
+    };
+    let youngest = of_sex(limit.female_ms, limit.male_ms);
+    let older = |from: &LimitFrom| of_sex(from.female_ms, from.male_ms);
+    match view.patient.age(view.now) {
+        Some(age) => {
+            let reached = limit.older.iter().filter(|from| from.from_years <= age);
+            reached.max_by_key(|from| from.from_years).map_or(youngest, older)
+        }
+        None => limit.older.iter().map(older).fold(youngest, f64::min),
     }
 }
 
@@ -443,7 +454,7 @@ fn medicines(view: &View<'_>, is: &Medicines) -> Verdict {
     for (medicine, exposure) in
         view.active().filter(|(medicine, exposure)| asked_for(view, is, medicine, exposure))
     {
-        let last = exposure.doses.last().map(|(at, _)| *at);
+        let last = exposure.doses.last().map(|dose| dose.at);
         because.rows.push(row(
             "listed medicine",
             &words::medicine(view, medicine, exposure),
@@ -456,7 +467,12 @@ fn medicines(view: &View<'_>, is: &Medicines) -> Verdict {
     if because.rows.len() >= is.at_least { Verdict::Fired(because) } else { Verdict::Quiet }
 }
 
-fn asked_for(view: &View<'_>, is: &Medicines, medicine: &Medicine, exposure: &Exposure) -> bool {
+fn asked_for(
+    view: &View<'_>,
+    is: &Medicines,
+    medicine: &Medicine,
+    exposure: &Exposure<'_>,
+) -> bool {
     let among = |asked: &[Spanned<String>], has: &[String]| {
         asked.is_empty()
             || asked
@@ -475,18 +491,18 @@ fn asked_for(view: &View<'_>, is: &Medicines, medicine: &Medicine, exposure: &Ex
                 .routes
                 .iter()
                 .any(|route| exposure.routes.iter().any(|own| own.eq_ignore_ascii_case(route))))
-        && is
-            .started_within_h
-            .is_none_or(|h| still(TimeDelta::milliseconds((h.0 * 3_600_000.0) as i64)))
+        && is.started_within_h.is_none_or(|h| still(span_h(h.0)))
         && is.within_half_lives_of_start.is_none_or(|n| still(view.half_lives(medicine, n.0)))
 }
 
 fn exposure(view: &View<'_>) -> Verdict {
     let active: Vec<&Medicine> = view.active().map(|(medicine, _)| medicine).collect();
-    let mut rows = Vec::new();
+    let (mut rows, mut rests_on) = (Vec::new(), BTreeSet::new());
     for one in &active {
         for other in &active {
             if let Some(path) = one.raises(other) {
+                rests_on.insert(Basis::Medicine(one.substance.as_str().into()));
+                rests_on.insert(Basis::Medicine(other.substance.as_str().into()));
                 let value = format!(
                     "{} can raise the exposure to {} (by {path})",
                     one.substance, other.substance
@@ -498,7 +514,7 @@ fn exposure(view: &View<'_>) -> Verdict {
     if rows.is_empty() {
         Verdict::Quiet
     } else {
-        Verdict::Fired(Because { rows, ..Because::default() })
+        Verdict::Fired(Because { rows, rests_on, ..Because::default() })
     }
 }
 
@@ -513,7 +529,7 @@ fn clearance(view: &View<'_>, below: f64) -> Verdict {
     }
     let described = &view.patient.described;
     let sex = described.sex.filter(|sex| *sex != Sex::Other);
-    let (Some((creatinine, at)), Some(age), Some(weight), Some(sex)) =
+    let (Some((creatinine, at, id)), Some(age), Some(weight), Some(sex)) =
         (view.creatinine(), view.patient.age(view.now), described.weight, sex)
     else {
         return Verdict::cannot_tell("creatinine clearance needs creatinine, age, weight and sex");
@@ -531,7 +547,10 @@ fn clearance(view: &View<'_>, below: f64) -> Verdict {
                     "results",
                 )
             },
-            [],
+            renal
+                .iter()
+                .map(|name| Basis::Medicine((*name).into()))
+                .chain([Basis::Result(id.clone())]),
         ),
         None => Verdict::cannot_tell("creatinine clearance could not be worked out"),
     }
@@ -549,5 +568,6 @@ fn risk(view: &View<'_>, is: &RiskIs) -> Verdict {
         }
         _ => (false, ""),
     };
-    yes(holds, || row(name, value, "", known.map(|(_, at)| *at), "chart"), [])
+    let said = Basis::Said(format!("{name} {value}").into());
+    yes(holds, || row(name, value, "", known.map(|(_, at)| *at), "chart"), [said])
 }

@@ -4,20 +4,19 @@ use super::row;
 use crate::fact::{Condition, Sex};
 use crate::protocol::condition::Of;
 use crate::score::{Items, Score, tisdale};
-use crate::verdict::Verdict;
+use crate::verdict::{Basis, Verdict};
 use crate::view::View;
 use crate::words;
-use chrono::TimeDelta;
 
 /// The score, as a range where an item is not known.
 pub fn tisdale_of(view: &View<'_>) -> Score {
     let recorded = |condition| view.patient.conditions.get(&condition).map(|(present, _)| *present);
-    let admitted = view.patient.admitted(view.now);
+    let from = view.patient.stay_from(view.now);
     let first = view
         .patient
         .tracings(view.now)
         .into_iter()
-        .filter(|recorded| admitted.is_none_or(|since| recorded.at >= since - TimeDelta::hours(24)))
+        .filter(|recorded| from.is_none_or(|from| recorded.at >= from))
         .map(|recorded| view.read(recorded))
         .find_map(|reading| view.qtc(&reading, view.protocol.reading.formula).ok());
     let in_group = |name: &str| {
@@ -57,7 +56,7 @@ pub(super) fn at_least(view: &View<'_>, points: f64) -> Verdict {
     let row =
         || row("Tisdale score", &found.words(), &format!("at least {points:.0}"), None, "chart");
     if f64::from(found.low) >= points {
-        Verdict::fired(row(), [])
+        Verdict::fired(row(), [Basis::Said(format!("Tisdale score {}", found.words()).into())])
     } else if f64::from(found.high) >= points {
         Verdict::cannot_tell(format!(
             "Tisdale score is {}: not known are {}",

@@ -325,7 +325,7 @@ impl Check<'_> {
         }
     }
 
-    /// Every role that is told must be reached on a ward that the roster doesn't name, at every quarter of an hour.
+    /// Every role that is told must be reached on a ward that the roster doesn't name, at every minute of the day.
     fn always_reached(
         &mut self,
         tiers: &[Tier],
@@ -342,8 +342,8 @@ impl Check<'_> {
                 .iter()
                 .filter(|entry| entry.role == *role && entry.wards.is_empty())
                 .collect();
-            let gap = (0..96)
-                .filter_map(|quarter| NaiveTime::from_hms_opt(quarter / 4, quarter % 4 * 15, 0))
+            let gap = (0..1440)
+                .filter_map(|minute| NaiveTime::from_hms_opt(minute / 60, minute % 60, 0))
                 .find(|time| {
                     !entries
                         .iter()
@@ -386,15 +386,13 @@ impl Check<'_> {
                 "write for example `after_start_h = [24]`",
             );
         }
-        let plain =
-            |names: Vec<Spanned<String>>| names.into_iter().map(Spanned::into_inner).collect();
         let hours = |h: super::condition::Positive| minutes(h.0 * 60.0);
         Watch {
             id: watch.id.into_inner(),
             asks_for: watch.asks_for,
-            evidence: plain(watch.evidence),
-            groups: plain(watch.groups),
-            substances: plain(watch.substances),
+            evidence: watch.evidence,
+            groups: watch.groups,
+            substances: watch.substances,
             before_first_dose: watch.before_first_dose_within_h.map(hours),
             after_start: watch.after_start_h.into_iter().map(hours).collect(),
             after_dose_change: watch.after_dose_change_h.into_iter().map(hours).collect(),

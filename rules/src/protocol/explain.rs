@@ -1,8 +1,9 @@
 //! A protocol told back in plain sentences that a committee could sign.
 
 use super::condition::{By, Condition, Medicines, Over, QtcIs, RiskState, State, TracingIs};
-use super::{Orders, Protocol, Tier, Watch};
+use super::{Orders, Protocol, RosterEntry, Tier, Watch};
 use crate::evaluate::of_word;
+use crate::fact::Feed;
 use crate::watch;
 use crate::words;
 use chrono::{NaiveTime, TimeDelta};
@@ -30,10 +31,21 @@ pub fn explain(protocol: &Protocol) -> String {
         words::list(protocol.reading.shown.iter().map(|f| f.name()))
     ));
     for (name, limit) in &protocol.limits {
-        say(format!(
-            "The limit \"{name}\" is {} ms for women and {} ms for men; the lower one where the sex is not known.",
+        let mut line = format!(
+            "The limit \"{name}\" is {} ms for women and {} ms for men",
             limit.female_ms.0, limit.male_ms.0
-        ));
+        );
+        for from in &limit.older {
+            let _ = write!(
+                line,
+                ", from {} years {} and {} ms",
+                from.from_years, from.female_ms.0, from.male_ms.0
+            );
+        }
+        if let Some(formula) = limit.formula {
+            let _ = write!(line, "; it is a limit of QTc by {formula} and by no other");
+        }
+        say(format!("{line}; the lowest that may hold where sex or age is not known."));
     }
     say(format!(
         "The baseline is the last good tracing before the first listed medicine, at most {} before it; else the first good one; \
@@ -59,9 +71,30 @@ pub fn explain(protocol: &Protocol) -> String {
         "With QRS of {} ms or more, or pacing, a QTc reaches at most the tier \"{wide}\" until it is over-read.",
         protocol.wide_qrs_ms
     ));
+    say(format!("The doubt of an over-read is taken as {} ms.", protocol.over_read_doubt_ms));
+    for (feed, after) in &protocol.silent_after {
+        say(format!(
+            "Nothing from the {} feed for {} is technical trouble.",
+            feed_word(*feed),
+            span(*after)
+        ));
+    }
+    let technical = protocol.tiers.get(protocol.technical.tier).map_or("", |t| t.name.as_str());
+    say(format!(
+        "Technical trouble is told to {} as \"{technical}\": {}",
+        words::list(protocol.technical.tell.iter().map(|role| role.as_str())),
+        protocol.technical.to_do
+    ));
+    if !protocol.intents.is_empty() {
+        say(format!("Who acknowledges says one of: {}.", protocol.intents.join("; ")));
+    }
     say(String::new());
     for tier in &protocol.tiers {
         say(of_tier(tier));
+    }
+    say(String::new());
+    for entry in &protocol.roster {
+        say(of_entry(entry));
     }
     say(String::new());
     for watch in &protocol.watches {
@@ -80,12 +113,16 @@ pub fn explain(protocol: &Protocol) -> String {
         let cannot =
             rule.cannot_tell.map_or("only shown".into(), |rank| format!("\"{}\"", tier(rank)));
         say(format!(
-            "Rule {} ({}): {only}when {}, the tier is \"{}\". Borderline is {borderline}; what can't be told is {cannot}. It says: {}",
+            "Rule {} ({}): {only}when {}, the tier is \"{}\". Borderline is {borderline}; what can't be told is {cannot}. It says: {}{}",
             rule.id,
             rule.concern,
             of(&rule.when),
             tier(rule.tier),
-            rule.says
+            rule.says,
+            rule.to_do
+                .as_deref()
+                .map(|to_do| format!(" Its own words on what to do: {to_do}"))
+                .unwrap_or_default()
         ));
     }
     text
@@ -114,13 +151,41 @@ fn of_tier(tier: &Tier) -> String {
     text
 }
 
+fn of_entry(entry: &RosterEntry) -> String {
+    let wards = if entry.wards.is_empty() {
+        "on every ward".to_owned()
+    } else {
+        format!("on {}", words::list(entry.wards.iter().map(|ward| ward.as_str())))
+    };
+    let hours = entry
+        .hours
+        .map(|(from, to)| format!(", from {} to {}", clock(from), clock(to)))
+        .unwrap_or_default();
+    format!(
+        "{} {wards}{hours} is reached at {}.",
+        entry.role,
+        words::list(entry.mail.iter().map(|mail| mail.expose()))
+    )
+}
+
+fn feed_word(feed: Feed) -> &'static str {
+    match feed {
+        Feed::Tracings => "tracing",
+        Feed::Results => "result",
+        Feed::Medicines => "medicine",
+    }
+}
+
 fn of_watch(watch: &Watch) -> String {
     let mut whose = Vec::new();
     for (name, values) in
         [("evidence", &watch.evidence), ("group", &watch.groups), ("substance", &watch.substances)]
     {
         if !values.is_empty() {
-            whose.push(format!("{name} {}", words::list(values)));
+            whose.push(format!(
+                "{name} {}",
+                words::list(values.iter().map(|v| v.as_ref().as_str()))
+            ));
         }
     }
     let whose = if whose.is_empty() {

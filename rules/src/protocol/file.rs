@@ -74,6 +74,21 @@ pub struct LimitBySex {
     pub male_ms: IntervalMs,
     /// The only formula that this limit was made for; any where not said.
     pub formula: Option<Formula>,
+    /// Other limits from some age on: `older = [{ from_years = 40, female_ms = 450, male_ms = 440 }]`.
+    #[serde(default)]
+    pub older: Vec<LimitFrom>,
+}
+
+/// A limit from some age on.
+#[derive(Debug, Clone, Deserialize)]
+#[serde(deny_unknown_fields)]
+pub struct LimitFrom {
+    /// From this age in full years.
+    pub from_years: u32,
+    /// For women.
+    pub female_ms: IntervalMs,
+    /// For men.
+    pub male_ms: IntervalMs,
 }
 
 #[derive(Debug, Deserialize)]

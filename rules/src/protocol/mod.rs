@@ -6,17 +6,23 @@ pub mod condition;
 mod example;
 mod explain;
 mod file;
+mod together;
 
 pub use example::{ExampleResult, run_examples};
 pub use explain::explain;
-pub use file::{AsksFor, EachDose, ExampleIs, ExamplePatient, Gives, LimitBySex, Orders, TEnd};
+pub use file::{
+    AsksFor, EachDose, ExampleIs, ExamplePatient, Gives, LimitBySex, LimitFrom, Orders, TEnd,
+};
+pub use together::{Books, check_together};
 
 use crate::correction::Formula;
 use crate::finding::Finding;
 use crate::ids::{ContentHash, Private, Role, RuleId, TierName, Ward};
+use crate::medicines::MedicineList;
 use chrono::{NaiveDate, NaiveTime, TimeDelta};
 use condition::Condition;
 use std::collections::BTreeMap;
+use toml::Spanned;
 
 /// A checked protocol.
 #[derive(Debug, Clone)]
@@ -145,11 +151,11 @@ pub struct Watch {
     /// What it asks for.
     pub asks_for: AsksFor,
     /// For medicines with this kind of evidence, …
-    pub evidence: Vec<String>,
+    pub evidence: Vec<Spanned<String>>,
     /// … of these groups, …
-    pub groups: Vec<String>,
+    pub groups: Vec<Spanned<String>>,
     /// … or these substances; for every listed medicine where all three are empty.
-    pub substances: Vec<String>,
+    pub substances: Vec<Spanned<String>>,
     /// Wanted before the first dose, not older than this.
     pub before_first_dose: Option<TimeDelta>,
     /// Wanted so long after the start.
@@ -200,6 +206,54 @@ impl Protocol {
         let file: file::File =
             toml::from_str(text).map_err(|error| vec![Finding::of_toml(text, &error)])?;
         check::checked(text, file)
+    }
+
+    /// The protocol before any came in force: one tier that tells nobody, and no rule.
+    pub(crate) fn none() -> Self {
+        Self {
+            name: "none in force".into(),
+            version: String::new(),
+            hash: ContentHash::of(b""),
+            approved: None,
+            zone: chrono_tz::UTC,
+            reading: ReadingRule {
+                formula: Formula::Fridericia,
+                t_end: TEnd::Tangent,
+                lead: None,
+                shown: vec![Formula::Fridericia],
+            },
+            limits: BTreeMap::new(),
+            baseline_within: TimeDelta::zero(),
+            active_half_lives: 5.0,
+            unknown_half_life: TimeDelta::hours(24),
+            orders: Orders::Count,
+            stale_after: TimeDelta::hours(24),
+            albumin_within: TimeDelta::zero(),
+            tisdale: crate::score::Readings::default(),
+            wide_qrs_ms: crate::wide::WIDE_FROM_MS,
+            wide_qrs_tier: 0,
+            over_read_doubt_ms: 0.0,
+            silent_after: BTreeMap::new(),
+            technical: TechnicalTier { tier: 0, tell: Vec::new(), to_do: String::new() },
+            tiers: vec![Tier {
+                name: TierName::new("technical"),
+                to_do: String::new(),
+                tell: Vec::new(),
+                answer_within: None,
+                then: Vec::new(),
+                quiet: None,
+            }],
+            intents: Vec::new(),
+            roster: Vec::new(),
+            watches: Vec::new(),
+            rules: Vec::new(),
+        }
+    }
+
+    /// What the protocol names and a medicine list doesn't know: such a rule never fires. The places are left to
+    /// [`check_together`].
+    pub fn not_on(&self, list: &MedicineList) -> Vec<Finding> {
+        together::strangers("", self, list)
     }
 
     /// The addresses of a role for a ward at a moment, each once, in the file's order.
