@@ -1,9 +1,12 @@
 //! The files that ship must be what they say: checked, with every example holding.
 
+use ebbmark_rules::codes::{LocalCodes, Meaning};
+use ebbmark_rules::fact::Analyte;
 use ebbmark_rules::medicines::MedicineList;
 use ebbmark_rules::protocol::{Protocol, explain, run_examples};
 
 pub(crate) const PROTOCOL: &str = include_str!("../../../config/protocol.toml");
+const CODES: &str = include_str!("../../../config/codes.toml");
 pub(crate) const MEDICINES: &str = include_str!("../../../config/medicines.toml");
 
 fn lines(found: Vec<ebbmark_rules::finding::Finding>) -> String {
@@ -32,4 +35,21 @@ fn every_rule_is_told_back_in_words() {
         assert!(told.contains(&format!("Rule {}", rule.id)), "{}", rule.id);
     }
     assert!(told.contains("Nobody has approved it"));
+}
+
+#[test]
+fn the_shipped_codes_check_and_name_every_analyte() {
+    let codes = LocalCodes::parse(CODES).map_err(lines).unwrap();
+    for (code, analyte) in [
+        ("K", Analyte::Potassium),
+        ("MG", Analyte::Magnesium),
+        ("CA", Analyte::CalciumTotal),
+        ("ICA", Analyte::CalciumIonised),
+        ("ALB", Analyte::Albumin),
+        ("CREA", Analyte::Creatinine),
+    ] {
+        assert_eq!(codes.meaning("SALTMERE-LAB", code), Some(Meaning::Analyte(analyte)));
+        assert_eq!(codes.unit("SALTMERE-LAB", code, ""), analyte.canonical());
+    }
+    assert_eq!(codes.meaning("SALTMERE-LAB", "U-K"), Some(Meaning::LeftOut));
 }
