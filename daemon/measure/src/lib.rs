@@ -1,11 +1,20 @@
 //! A [`Recording`] in, a [`Measurement`] out: where the T wave ebbs back to the baseline, and how far to
 //! believe it. Depends on nothing of ours; does no I/O; owns no clock.
 
-#[allow(dead_code, reason = "the fusion of readers calls it")]
+mod beats;
+mod clean;
+mod engine;
+mod filter;
 mod learned;
 mod measurement;
+mod reading;
 mod recording;
+mod resample;
+mod series;
+mod shape;
 mod units;
+mod verdict;
+mod wave;
 
 pub use measurement::{
     Answer, Beat, BeatKind, ENGINE, Intervals, LeadReading, Marks, Measurement, MedianBeat,
@@ -33,18 +42,5 @@ pub fn training_windows(leads: &[&[f32]], hz: f32, r: &[usize]) -> Vec<f32> {
 
 /// Measures one recording. Never fails: what cannot be told is [`Answer::None`] with its reasons.
 pub fn measure(recording: &Recording, options: &Options) -> Measurement {
-    let _ = (recording, options);
-    Measurement {
-        answer: Answer::None(vec![Reason::NoUsableLead]),
-        remarks: Vec::new(),
-        rr: None,
-        rate: None,
-        rhythm: None,
-        intervals: None,
-        qrs: None,
-        paced: false,
-        per_lead: Vec::new(),
-        beats: Vec::new(),
-        median: None,
-    }
+    engine::measure(recording, options)
 }
