@@ -47,7 +47,12 @@ pub(crate) struct Read {
     pub heights: Vec<f32>,
 }
 
-pub(crate) fn measure(recording: &Recording, options: &Options) -> Measurement {
+/// Measures with the nets given; `None` leaves them out.
+pub(crate) fn measure(
+    recording: &Recording,
+    options: &Options,
+    learned: Option<&Reader>,
+) -> Measurement {
     let hz = recording.sampling().get();
     let sample = |s: Option<Seconds>, or: usize| {
         s.map_or(or, |s| ((s.get().max(0.0) * hz) as usize).min(recording.samples()))
@@ -58,7 +63,6 @@ pub(crate) fn measure(recording: &Recording, options: &Options) -> Measurement {
         let why = Seconds::new(seconds).map(Reason::TooShort);
         return nothing(recording, why.into_iter().collect(), Vec::new());
     }
-    let learned = if options.classical_only { None } else { Reader::shipped().ok() };
     let mut read = Read {
         beats: Vec::new(),
         groups: Vec::new(),

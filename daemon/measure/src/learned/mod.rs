@@ -90,7 +90,8 @@ impl Reader {
         READER.get_or_init(|| Reader::parse(include_str!("weights.txt"))).as_ref()
     }
 
-    fn parse(text: &str) -> Result<Self, NotWeights> {
+    /// Reads a weights file.
+    pub(crate) fn parse(text: &str) -> Result<Self, NotWeights> {
         let nets = weights::parse(text)?;
         let named = |start: &str, outputs: usize| {
             nets.iter()
@@ -163,17 +164,18 @@ impl Reader {
     }
 }
 
-/// What training sees of each beat: its length in ms, then the low and the wide track of every lead, each beat
-/// averaged with up to eight that resemble it.
-pub(crate) fn training_windows(leads: &[&[f32]], hz: f32, r: &[usize]) -> Vec<f32> {
+/// What training sees of each beat: its R peak in seconds, its length in ms, then the low and the wide track of
+/// every lead, each beat averaged with up to eight that resemble it.
+pub(crate) fn training_windows(leads: &[&[f32]], hz: f32, r: &[usize]) -> Vec<Vec<f32>> {
     let beats = Beats { leads, hz, r };
-    let mut out = Vec::new();
-    for beat in 0..r.len() {
-        let average = beats.average(&beats.neighbours(beat, 15, 8));
-        out.push(beats.rr_ms(beat));
-        for track in average.low.iter().chain(&average.wide) {
-            out.extend_from_slice(&track.uv);
-        }
-    }
-    out
+    (0..r.len())
+        .map(|beat| {
+            let average = beats.average(&beats.neighbours(beat, 15, 8));
+            let mut out = vec![r[beat] as f32 / hz, beats.rr_ms(beat)];
+            for track in average.low.iter().chain(&average.wide) {
+                out.extend_from_slice(&track.uv);
+            }
+            out
+        })
+        .collect()
 }
