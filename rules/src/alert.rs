@@ -188,6 +188,10 @@ pub struct Notice {
     pub at: At,
     /// When an unanswered message goes to the next role, so that the reader knows.
     pub answer_by: Option<At>,
+    /// Which role that is.
+    pub then: Option<Role>,
+    /// What led to this message, where the reason alone does not say it: what ended the alert, who handed it over.
+    pub because: Box<str>,
     /// The alert as it stood.
     pub alert: Alert,
 }

@@ -47,7 +47,7 @@ pub(super) struct Signature {
 enum Awaits {
     Answer,
     SnoozeEnd,
-    QuietEnd(Vec<Role>, NoticeReason),
+    QuietEnd(Vec<Role>, NoticeReason, Box<str>),
 }
 
 /// What is to be raised or changed.
@@ -113,7 +113,7 @@ impl Decider {
             refused: BTreeSet::new(),
         };
         let roles = tell.unwrap_or_else(|| tier.tell.clone());
-        open.tell(&protocol, roles, NoticeReason::Raised, at, out);
+        open.tell(&protocol, roles, NoticeReason::Raised, "", at, out);
         self.keep(key, open);
     }
 
@@ -140,7 +140,7 @@ impl Decider {
                 open.escalations = 0;
                 open.deadline = None;
                 out.push(Decision::Changed(Box::new(open.alert.clone())));
-                open.tell(&protocol, tier.tell.clone(), NoticeReason::TierRaised, at, out);
+                open.tell(&protocol, tier.tell.clone(), NoticeReason::TierRaised, "", at, out);
             } else if changed {
                 out.push(Decision::Changed(Box::new(open.alert.clone())));
                 match &open.deadline {
@@ -149,9 +149,9 @@ impl Decider {
                             tier.answer_within.map(|within| (at + within, Awaits::Answer));
                     }
                     // Nobody was told yet: the lower tier's people are, in the lower tier's time.
-                    Some((_, Awaits::QuietEnd(_, reason))) if fell => {
-                        let reason = reason.clone();
-                        open.tell(&protocol, tier.tell.clone(), reason, at, out);
+                    Some((_, Awaits::QuietEnd(_, reason, because))) if fell => {
+                        let (reason, because) = (reason.clone(), because.clone());
+                        open.tell(&protocol, tier.tell.clone(), reason, &because, at, out);
                     }
                     _ => {}
                 }
@@ -185,7 +185,7 @@ impl Decider {
         if withdrawn || highest {
             let reason = if withdrawn { NoticeReason::Withdrawn } else { NoticeReason::Closed };
             for (role, recipients) in std::mem::take(&mut open.told) {
-                open.notice(role, recipients, reason.clone(), None, at, out);
+                open.notice(&protocol, role, recipients, reason.clone(), because, None, at, out);
             }
         }
     }
@@ -272,8 +272,8 @@ impl Decider {
         }
     }
 
-    /// A recipient who can never be reached is as good as one who doesn't answer: where nobody else was told, the next
-    /// role is told at once.
+    /// A recipient who can never be reached is as good as one who doesn't answer: where nobody else was reached, the
+    /// next role is told at once. Past the last role its deadline goes on as for any unanswered alert.
     pub(super) fn unreachable(
         &mut self,
         id: &AlertId,
@@ -287,7 +287,10 @@ impl Decider {
             open.refused.insert(recipient.clone());
             let mut told = open.told.iter().flat_map(|(_, recipients)| recipients);
             let reached = told.any(|other| !open.refused.contains(other));
-            if open.alert.state == AlertState::Open && !reached {
+            let next = protocol.tiers.get(open.rank).is_some_and(|tier| {
+                usize::try_from(open.escalations).is_ok_and(|tried| tried < tier.then.len())
+            });
+            if open.alert.state == AlertState::Open && !reached && next {
                 open.escalate(protocol, at, out);
             }
         });
@@ -332,12 +335,13 @@ impl Decider {
     ) {
         self.with(id, |open, protocol| {
             open.alert.state = AlertState::Open;
+            let because = format!("handed over by {by}");
             open.life(at, LifeStep::HandedOver { by: by.as_str().into(), to: to.clone() }, out);
             // A role that the roster doesn't reach would be nobody: then the tier's own people are told.
             let nobody = protocol.recipients(to, open.ward.as_ref(), at).is_empty();
             let own = protocol.tiers.get(open.rank).map(|tier| tier.tell.clone());
             let roles = own.filter(|_| nobody).unwrap_or_else(|| vec![to.clone()]);
-            open.tell(protocol, roles, NoticeReason::HandedOver, at, out);
+            open.tell(protocol, roles, NoticeReason::HandedOver, &because, at, out);
         });
     }
 
@@ -369,9 +373,11 @@ impl Decider {
                     open.alert.state = AlertState::Open;
                     open.life(at, LifeStep::SnoozeEnded, out);
                     let roles = open.told.iter().map(|(role, _)| role.clone()).collect();
-                    open.tell(protocol, roles, NoticeReason::SnoozeEnded, at, out);
+                    open.tell(protocol, roles, NoticeReason::SnoozeEnded, "", at, out);
                 }
-                Awaits::QuietEnd(roles, reason) => open.tell(protocol, roles, reason, at, out),
+                Awaits::QuietEnd(roles, reason, because) => {
+                    open.tell(protocol, roles, reason, &because, at, out);
+                }
             },
             other => open.deadline = other,
         });
@@ -409,7 +415,7 @@ impl Decider {
             if technical.is_some() && open.told.is_empty() {
                 // Raised when no protocol said whom to tell.
                 let tell = protocol.technical.tell.clone();
-                open.tell(&protocol, tell, NoticeReason::Raised, at, out);
+                open.tell(&protocol, tell, NoticeReason::Raised, "", at, out);
             }
             self.keep(key, open);
         }
@@ -440,6 +446,7 @@ impl OpenAlert {
         protocol: &Protocol,
         roles: Vec<Role>,
         reason: NoticeReason,
+        because: &str,
         at: At,
         out: &mut Vec<Decision>,
     ) {
@@ -450,7 +457,10 @@ impl OpenAlert {
         }
         let local = at.with_timezone(&protocol.zone).time();
         if let Some(hours) = tier.quiet.filter(|hours| within(*hours, local)) {
-            self.deadline = Some((quiet_end(hours.1, local, at), Awaits::QuietEnd(roles, reason)));
+            self.deadline = Some((
+                quiet_end(hours.1, local, at),
+                Awaits::QuietEnd(roles, reason, because.into()),
+            ));
             return;
         }
         let answer_by = tier.answer_within.map(|within| at + within);
@@ -467,27 +477,33 @@ impl OpenAlert {
                 }
                 None => self.told.push((role.clone(), recipients.clone())),
             }
-            self.notice(role, recipients, reason.clone(), answer_by, at, out);
+            self.notice(protocol, role, recipients, reason.clone(), because, answer_by, at, out);
         }
     }
 
     /// Tells the next role; past the last, that one again, for ever, because an unanswered alert is never dropped.
     fn escalate(&mut self, protocol: &Protocol, at: At, out: &mut Vec<Decision>) {
-        let Some(tier) = protocol.tiers.get(self.rank) else { return };
-        let index = usize::try_from(self.escalations)
-            .unwrap_or(usize::MAX)
-            .min(tier.then.len().saturating_sub(1));
-        let Some(to) = tier.then.get(index).cloned() else { return };
+        let Some(to) = self.next_role(protocol).cloned() else { return };
         self.escalations += 1;
         self.life(at, LifeStep::Escalated { number: self.escalations, to: to.clone() }, out);
-        self.tell(protocol, vec![to], NoticeReason::Escalated, at, out);
+        self.tell(protocol, vec![to], NoticeReason::Escalated, "", at, out);
     }
 
+    /// Whom an unanswered alert goes to next.
+    fn next_role<'p>(&self, protocol: &'p Protocol) -> Option<&'p Role> {
+        let then = &protocol.tiers.get(self.rank)?.then;
+        let index = usize::try_from(self.escalations).unwrap_or(usize::MAX);
+        then.get(index.min(then.len().saturating_sub(1)))
+    }
+
+    #[allow(clippy::too_many_arguments, reason = "a notice has this many parts")]
     fn notice(
         &mut self,
+        protocol: &Protocol,
         role: Role,
         recipients: Vec<Private>,
         reason: NoticeReason,
+        because: &str,
         answer_by: Option<At>,
         at: At,
         out: &mut Vec<Decision>,
@@ -499,6 +515,8 @@ impl OpenAlert {
             recipients,
             at,
             answer_by,
+            then: answer_by.and_then(|_| self.next_role(protocol)).cloned(),
+            because: because.into(),
             alert: self.alert.clone(),
         })));
         self.steps += 1;
