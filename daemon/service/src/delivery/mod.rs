@@ -4,6 +4,7 @@
 //! deadline; and settled by what the server said. Only a 250 after the final dot is "sent".
 
 mod mailer;
+mod smtp;
 
 pub use mailer::Mailer;
 
@@ -24,8 +25,6 @@ use tokio_util::sync::CancellationToken;
 
 /// Messages under way at once: a few connections, so that one slow recipient does not hold up the others.
 const AT_ONCE: usize = 4;
-/// The whole of one sending, from connecting to the server's last word.
-const DEADLINE: Duration = Duration::from_secs(90);
 /// First and longest pause between two attempts.
 const FIRST_PAUSE_S: i64 = 15;
 const LONGEST_PAUSE_S: i64 = 15 * 60;
@@ -57,10 +56,8 @@ pub async fn run(
             for message in ledger.claim(AT_ONCE - under_way.len()).await? {
                 let mailer = mailer.clone();
                 under_way.spawn(async move {
-                    let answer = tokio::time::timeout(DEADLINE, mailer.send(&message)).await;
-                    let late =
-                        || Answer::NotNow(format!("no answer within {} s", DEADLINE.as_secs()));
-                    (message, answer.unwrap_or_else(|_| late()))
+                    let answer = mailer.send(&message).await;
+                    (message, answer)
                 });
             }
         }
@@ -88,7 +85,7 @@ pub async fn run(
                 Ok((message, answer)) => {
                     let sending = settled(&message, answer, clock.now());
                     failing_since = health(&ledger, &sending, failing_since, clock.now()).await?;
-                    ledger.settle(message.id, sending).await?;
+                    ledger.settle(message.rows, sending).await?;
                 }
                 // The message stays claimed, and goes out again at the next start, the same bytes under the same id.
                 Err(error) => tracing::error!(%error, "sending a message failed in a way that it should not"),
@@ -101,7 +98,7 @@ pub async fn run(
 /// What the server's answer means for the message.
 fn settled(message: &Outgoing, answer: Answer, now: At) -> Sending {
     match answer {
-        Answer::Sent(reply) => {
+        Answer::Sent { reply } => {
             tracing::info!(
                 message = message.id,
                 attempts = message.attempts + 1,
@@ -109,17 +106,18 @@ fn settled(message: &Outgoing, answer: Answer, now: At) -> Sending {
             );
             Sending::Sent { reply }
         }
-        Answer::Refused(reply) => {
-            tracing::error!(message = message.id, "the server refuses a recipient for good");
+        Answer::Refused { verb, reply } => {
+            tracing::error!(message = message.id, verb, "the server refuses a recipient for good");
             Sending::Refused { reply }
         }
-        Answer::NotNow(why) => {
+        Answer::NotNow { verb, why } => {
             let pause = pause(message);
             let wait_s = pause.num_seconds();
             tracing::warn!(
                 message = message.id,
                 attempts = message.attempts + 1,
                 wait_s,
+                verb,
                 "a message waits"
             );
             Sending::Waiting { next_try: now + pause, why }
@@ -136,7 +134,8 @@ async fn health(
 ) -> Result<Option<At>, StoreError> {
     if !matches!(sending, Sending::Waiting { .. }) {
         if ledger.trouble(Trouble::Mail, false).await? {
-            tracing::info!("mail goes out again");
+            let waiting = ledger.hurry().await?;
+            tracing::info!(waiting, "mail goes out again");
         }
         return Ok(None);
     }
@@ -167,6 +166,7 @@ mod tests {
     fn pauses_grow_to_a_quarter_of_an_hour_and_stay_there() {
         let message = |attempts| Outgoing {
             id: 1,
+            rows: vec![1],
             alert: AlertId::new("a"),
             step: 0,
             recipient: Private::new("x@y.example"),

@@ -2,7 +2,7 @@
 
 use super::raw::{self, Raw};
 use super::{
-    Codes, Folders, Intake, Mail, MailBy, Problems, Secret, Settings, SignIn, Site, Smtp, Tls,
+    Folders, Intake, Mail, MailBy, Problems, Secret, Settings, SignIn, Site, Smtp, Tls, Words,
 };
 use ebbmark_rules::finding::Finding;
 use std::ops::RangeInclusive;
@@ -24,6 +24,7 @@ const LARGEST_FILE_MIB: Bound = Bound { key: "largest_file_mib", range: 1..=1_02
 const LEAST_FREE_MIB: Bound = Bound { key: "least_free_mib", range: 1..=1_048_576, default: 2_048 };
 const WORKERS: Bound = Bound { key: "workers", range: 1..=256, default: 1 };
 const PORT: Bound = Bound { key: "port", range: 1..=65_535, default: 587 };
+const ATTEMPT_S: Bound = Bound { key: "attempt_s", range: 1..=600, default: 90 };
 
 pub(super) fn check(file: &Path, text: &str) -> Result<Settings, Problems> {
     let raw: Raw = toml::from_str(text).map_err(|error| {
@@ -81,8 +82,7 @@ impl Check<'_> {
         let folders = self.folders(&raw.folders);
         let intake = self.intake(&raw.intake);
         let mail = self.mail(&raw.mail);
-        let codes = Codes::default();
-        let settings = Settings { site: site?, folders: folders?, intake, mail: mail?, codes };
+        let settings = Settings { site: site?, folders: folders?, intake, mail: mail? };
         let (export, store) = (&settings.folders.export, &settings.folders.store);
         if export.starts_with(store) || store.starts_with(export) {
             self.wrong_hint(
@@ -148,10 +148,6 @@ impl Check<'_> {
         let store = self.path(&raw.store, "store");
         let protocol = self.path(&raw.protocol, "protocol");
         let medicines = self.path(&raw.medicines, "medicines");
-        let codes = match &raw.codes {
-            Some(value) => Some(self.path(value, "codes")?),
-            None => None,
-        };
         let marker = match &raw.marker {
             Some(value) => {
                 let name = self.filled(value, "marker")?;
@@ -171,7 +167,6 @@ impl Check<'_> {
             store: store?,
             protocol: protocol?,
             medicines: medicines?,
-            codes,
             marker,
             least_free,
         })
@@ -223,7 +218,15 @@ impl Check<'_> {
                 return self.no(&raw.by, &what);
             }
         };
-        Some(Mail { from, names: raw.names.as_ref().is_some_and(|names| *names.get_ref()), by })
+        let mut words = Words::default();
+        if let Some(answer) = &raw.words.answer {
+            words.answer = self.filled(answer, "answer")?;
+        }
+        if let Some(sign_off) = &raw.words.sign_off {
+            words.sign_off = sign_off.get_ref().trim().to_owned();
+        }
+        let names = raw.names.as_ref().is_some_and(|names| *names.get_ref());
+        Some(Mail { from, names, by, words })
     }
 
     fn no<T, U>(&mut self, value: &Spanned<T>, what: &str) -> Option<U> {
@@ -265,7 +268,19 @@ impl Check<'_> {
                 "set `tls` to `starttls` or `wrapped`, or leave `user` out",
             );
         }
-        Some(Smtp { host: host?, port: u16::try_from(port).ok()?, tls, ca_file, sign_in })
+        if let (Tls::Plain, Some(host)) = (tls, &host) {
+            let is_here = host == "localhost"
+                || host.parse::<std::net::IpAddr>().is_ok_and(|address| address.is_loopback());
+            if !is_here {
+                self.wrong_hint(
+                    &raw.host,
+                    format!("`tls` is `plain`, but `{host}` is not this machine"),
+                    "set `tls` to `starttls` or `wrapped`: messages speak of patients",
+                );
+            }
+        }
+        let attempt = Duration::from_secs(self.number(raw.attempt_s.as_ref(), &ATTEMPT_S));
+        Some(Smtp { host: host?, port: u16::try_from(port).ok()?, tls, ca_file, sign_in, attempt })
     }
 
     fn sign_in(&mut self, user: &Spanned<String>, raw: &raw::Smtp) -> Option<SignIn> {
@@ -393,6 +408,22 @@ folder = { path = "mail" }
             .replace("= 2000", "= 1")
             .replace("ebbmark@brannock", "a b@c");
         assert_eq!(problems(&text).lines().filter(|line| line.contains("line ")).count(), 3);
+    }
+
+    #[test]
+    fn messages_in_the_clear_stay_on_this_machine() {
+        let text = |host: &str| {
+            GOOD.replace("by = \"folder\"", "by = \"smtp\"").replace(
+                "folder = { path = \"mail\" }",
+                &format!("smtp = {{ host = \"{host}\", tls = \"plain\" }}"),
+            )
+        };
+        for here in ["localhost", "127.0.0.1", "::1"] {
+            check(Path::new("ebbmark.toml"), &text(here)).unwrap();
+        }
+        for away in ["mail.example", "10.0.0.1", "localhost.example"] {
+            assert!(problems(&text(away)).contains("is not this machine"), "{away}");
+        }
     }
 
     #[test]

@@ -28,7 +28,6 @@ pub(super) struct Folders {
     pub(super) store: Spanned<String>,
     pub(super) protocol: Spanned<String>,
     pub(super) medicines: Spanned<String>,
-    pub(super) codes: Option<Spanned<String>>,
     pub(super) marker: Option<Spanned<String>>,
     pub(super) least_free_mib: Option<Spanned<u64>>,
 }
@@ -51,6 +50,15 @@ pub(super) struct Mail {
     pub(super) names: Option<Spanned<bool>>,
     pub(super) smtp: Option<Spanned<Smtp>>,
     pub(super) folder: Option<Spanned<Folder>>,
+    #[serde(default)]
+    pub(super) words: Words,
+}
+
+#[derive(Debug, Default, Deserialize)]
+#[serde(deny_unknown_fields)]
+pub(super) struct Words {
+    pub(super) answer: Option<Spanned<String>>,
+    pub(super) sign_off: Option<Spanned<String>>,
 }
 
 #[derive(Debug, Deserialize)]
@@ -63,6 +71,7 @@ pub(super) struct Smtp {
     pub(super) user: Option<Spanned<String>>,
     pub(super) password_file: Option<Spanned<String>>,
     pub(super) password_credential: Option<Spanned<String>>,
+    pub(super) attempt_s: Option<Spanned<u64>>,
 }
 
 #[derive(Debug, Deserialize)]
