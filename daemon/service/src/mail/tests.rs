@@ -1,6 +1,6 @@
 use super::*;
 use ebbmark_rules::alert::{
-    Alert, AlertState, Evidence, EvidenceRow, FormulaRow, Notice, NoticeReason,
+    Alert, AlertState, Evidence, EvidenceRow, FormulaRow, Notice, NoticeReason, Tide,
 };
 use ebbmark_rules::ids::{AlertId, PatientId, Role, RuleId, TierName};
 
@@ -22,13 +22,17 @@ fn notice(reason: NoticeReason) -> Notice {
         decided,
         split,
     };
+    let is_past = matches!(reason, NoticeReason::Withdrawn | NoticeReason::Closed);
+    let because = if is_past { "the result that it rested on was corrected" } else { "" };
     Notice {
         step: 0,
         reason,
         role: Role::new("ward-pharmacist"),
         recipients: vec![Private::new("pharmacy@saltmere.example")],
         at: at(0),
-        answer_by: Some(at(30)),
+        answer_by: (!is_past).then(|| at(30)),
+        then: (!is_past).then(|| Role::new("ward-doctor")),
+        because: because.into(),
         alert: Alert {
             id: AlertId::new("alert-77"),
             patient: PatientId::new("saltmere", "4711-secret"),
@@ -59,17 +63,27 @@ fn notice(reason: NoticeReason) -> Notice {
                 protocol_version: "1".into(),
                 protocol_hash: ContentHash::of(b"protocol"),
                 protocol_signed: false,
-                tide: None,
+                tide: Some(Tide {
+                    limits: vec![(500.0, TierName::new("call"))],
+                    baseline: Some(431.0),
+                    value: 512.0,
+                    doubt: 9.0,
+                }),
             },
         },
     }
 }
 
-fn site() -> Site {
-    Site {
-        name: "Saltmere General".to_owned(),
-        zone: chrono_tz::Europe::London,
-        issuer: "saltmere".to_owned(),
+fn press(names: bool) -> Press {
+    Press {
+        site: Site {
+            name: "Saltmere General".to_owned(),
+            zone: chrono_tz::Europe::London,
+            issuer: "saltmere".to_owned(),
+        },
+        from: "ebbmark@saltmere.example".to_owned(),
+        names,
+        words: Words { sign_off: "Ward pharmacy, extension 4417".to_owned(), ..Words::default() },
     }
 }
 
@@ -81,13 +95,47 @@ fn message(notice: &Notice, names: bool) -> String {
         message_id: "0123456789abcdef@saltmere.example",
         name: Some(&name),
     };
-    String::from_utf8(render(&site(), "ebbmark@saltmere.example", names, &post)).unwrap()
+    String::from_utf8(press(names).print(&Sheet::Letter(post))).unwrap()
 }
 
-/// Undoes quoted-printable soft breaks and escapes as far as these texts need it (RFC 2045, 6.7).
-fn plain(message: &str) -> String {
-    message.replace("=\r\n", "").replace("\r\n", "\n").replace("=C2=B1", "±").replace("=3D", "=")
+/// Both bodies as a mail program shows them, read by a parser that others wrote.
+fn bodies(message: &str) -> (String, String) {
+    let parsed = mail_parser::MessageParser::default().parse(message.as_bytes()).unwrap();
+    let text = parsed.body_text(0).unwrap().replace("\r\n", "\n");
+    (text, parsed.body_html(0).unwrap().into_owned())
 }
+
+/// What stands in HTML as text: no tags, the five escapes undone, white space as one space.
+fn words(html: &str) -> String {
+    let body = html.split_once("<body").unwrap().1.split_once('>').unwrap().1;
+    let mut text = String::new();
+    let mut inside = false;
+    for letter in body.chars() {
+        match letter {
+            '<' => inside = true,
+            // A tag ends a word, except within a line.
+            '>' => inside = false,
+            letter if !inside => text.push(letter),
+            _ => {}
+        }
+    }
+    let text = text.replace("&lt;", "<").replace("&gt;", ">").replace("&quot;", "\"");
+    text.replace("&amp;", "&")
+}
+
+fn flat(text: &str) -> String {
+    text.split_whitespace().collect::<Vec<_>>().join(" ")
+}
+
+const REASONS: [NoticeReason; 7] = [
+    NoticeReason::Raised,
+    NoticeReason::TierRaised,
+    NoticeReason::Escalated,
+    NoticeReason::SnoozeEnded,
+    NoticeReason::HandedOver,
+    NoticeReason::Withdrawn,
+    NoticeReason::Closed,
+];
 
 #[test]
 fn same_notice_gives_the_same_bytes() {
@@ -98,66 +146,159 @@ fn same_notice_gives_the_same_bytes() {
 /// What `Every alert carries` asks for, in both bodies.
 #[test]
 fn both_bodies_say_everything() {
-    let text = plain(&message(&notice(NoticeReason::Raised), false));
-    let flat = text.split_whitespace().collect::<Vec<_>>().join(" ");
-    for part in [
-        "CALL: Heron ward, bed 4",
-        "To do, per local protocol: call the ward doctor now; repeat the tracing",
-        "QTc of 500 ms or more on a good tracing",
-        "two listed medicines are active",
-        "431 ms on 2 Mar; now 81 ms longer",
-        "haloperidol, last given 3 h ago",
-        "potassium 3.1 mmol/L, 2 h ago",
-        "magnesium: never measured",
-        "512 ± 9 ms",
-        "limit: at least 500 ms",
-        "file 3f2a90c1d4e5, tracing",
-        "498 ms",
-        "on the other side of the limit",
-        "Saltmere example, version 1",
-        "no hospital has signed this protocol",
-        "it does not diagnose or prescribe",
-        "No alert does not mean no risk",
-    ] {
-        assert_eq!(flat.matches(part).count(), 2, "{part} in:\n{text}");
+    let (text, html) = bodies(&message(&notice(NoticeReason::Raised), false));
+    for body in [flat(&text), flat(&words(&html))] {
+        for part in [
+            "CALL: Heron ward, bed 4",
+            "Per local protocol: call the ward doctor now; repeat the tracing",
+            "Then it goes to: ward-doctor.",
+            "QTc of 500 ms or more on a good tracing",
+            "two listed medicines are active",
+            "431 ms on 2 Mar; now 81 ms longer",
+            "haloperidol, last given 3 h ago",
+            "potassium 3.1 mmol/L, 2 h ago <low>",
+            "magnesium: never measured",
+            "512 ± 9 ms",
+            "limit: at least 500 ms",
+            "file 3f2a90c1d4e5, tracing",
+            "498 ms",
+            "on the other side of the limit",
+            "Saltmere example, version 1",
+            "EXAMPLE PROTOCOL, signed by no hospital",
+            "QTc now 512 ± 9 ms; baseline 431; call from 500",
+            "Opening this mail or replying to it is no answer.",
+            "it does not diagnose or prescribe",
+            "No alert does not mean no risk",
+            "Ward pharmacy, extension 4417",
+        ] {
+            assert!(body.contains(part), "{part} in:\n{body}");
+        }
     }
-    assert!(text.contains("&lt;low&gt;"), "HTML is escaped");
+    assert!(html.contains("&lt;low&gt;"), "HTML is escaped");
+}
+
+/// Every word of the text stands in the HTML, in the same order, but for the scale in letters, marks and capitals.
+#[test]
+fn plain_text_and_html_say_the_same() {
+    for reason in REASONS {
+        let (text, html) = bodies(&message(&notice(reason), false));
+        let lines = text.lines().filter(|line| !line.contains("....") && !line.starts_with("---"));
+        let letters = |text: &str| -> String {
+            text.chars()
+                .filter(|letter| letter.is_alphanumeric())
+                .collect::<String>()
+                .to_lowercase()
+        };
+        let text = letters(&lines.collect::<Vec<_>>().join("\n"));
+        assert_eq!(text, letters(&words(&html)));
+    }
+}
+
+#[test]
+fn lines_are_no_longer_than_78_characters() {
+    for reason in REASONS {
+        let message = message(&notice(reason), false);
+        assert!(message.lines().all(|line| line.chars().count() <= 78), "as sent");
+        let (text, _) = bodies(&message);
+        let long = text.lines().find(|line| line.chars().count() > 78);
+        assert_eq!(long, None);
+    }
 }
 
 #[test]
 fn subject_and_headers_name_no_patient() {
-    let text = message(&notice(NoticeReason::Escalated), true);
-    let head = text.split("\r\n\r\n").next().unwrap();
-    assert!(head.contains("Subject: Ebbmark call: not answered yet, answer by "), "{head}");
-    for secret in ["4711", "Heron", "bed", "Ada", "Quill"] {
-        assert!(!head.contains(secret), "{secret} in {head}");
+    for reason in REASONS {
+        let text = message(&notice(reason), true);
+        let head = text.split("\r\n\r\n").next().unwrap();
+        assert!(head.contains("Subject: Ebbmark call: "), "{head}");
+        for secret in ["4711", "Heron", "bed", "Ada", "Quill"] {
+            assert!(!head.contains(secret), "{secret} in {head}");
+        }
+        assert!(!text.contains("4711-secret"), "a number never goes out");
     }
-    assert!(!text.contains("4711-secret"), "a number never goes out");
 }
 
 #[test]
 fn names_stand_in_the_body_only_where_the_site_says_so() {
     let notice = notice(NoticeReason::Raised);
     assert!(!message(&notice, false).contains("Quill"));
-    assert!(plain(&message(&notice, true)).contains("CALL: Heron ward, bed 4 (Ada Quill)"));
+    let (text, html) = bodies(&message(&notice, true));
+    assert!(text.starts_with("CALL: Heron ward, bed 4 (Ada Quill)"), "{text}");
+    assert!(words(&html).contains("CALL: Heron ward, bed 4 (Ada Quill)"));
+}
+
+#[test]
+fn picture_is_within_the_message_and_named_by_the_html() {
+    let message = message(&notice(NoticeReason::Raised), false);
+    let parsed = mail_parser::MessageParser::default().parse(message.as_bytes()).unwrap();
+    let pictures: Vec<_> = parsed.attachments().collect();
+    assert_eq!(pictures.len(), 1);
+    assert!(pictures[0].contents().starts_with(b"\x89PNG"));
+    use mail_parser::MimeHeaders;
+    assert_eq!(pictures[0].content_id(), Some("tide"));
+    assert!(parsed.body_html(0).unwrap().contains("src=\"cid:tide\""));
 }
 
 #[test]
 fn withdrawn_alert_asks_for_nothing() {
-    let text = plain(&message(&notice(NoticeReason::Withdrawn), false));
-    assert!(text.contains("WITHDRAWN"));
-    assert!(!text.contains("To do, per local protocol"));
+    let (text, _) = bodies(&message(&notice(NoticeReason::Withdrawn), false));
+    assert!(text.starts_with("WITHDRAWN, was CALL: Heron ward, bed 4"), "{text}");
+    assert!(!text.contains("Per local protocol:") && !text.contains("Answer by"), "{text}");
 }
 
 #[test]
 fn no_message_says_safe_or_stop() {
-    for reason in [
-        NoticeReason::Raised,
-        NoticeReason::Closed,
-        NoticeReason::Withdrawn,
-        NoticeReason::Escalated,
+    for reason in REASONS {
+        let (text, html) = bodies(&message(&notice(reason), false));
+        for body in [text.to_lowercase(), html.to_lowercase()] {
+            assert!(!body.contains("safe") && !body.contains("stop the"), "{body}");
+        }
+    }
+}
+
+#[test]
+fn trouble_of_the_service_speaks_of_no_patient() {
+    let mut notice = notice(NoticeReason::Raised);
+    notice.alert.patient = None;
+    notice.alert.concern = "disk".into();
+    let message = message(&notice, false);
+    assert!(message.contains("Subject: Ebbmark call: new alert about the service (disk)"));
+    let (text, _) = bodies(&message);
+    assert!(!text.contains("WHY IT MATTERS FOR THIS PATIENT"), "{text}");
+}
+
+#[test]
+fn digest_puts_the_most_pressing_first_and_keeps_every_part_whole() {
+    let withdrawn = notice(NoticeReason::Withdrawn);
+    let mut later = notice(NoticeReason::Raised);
+    later.answer_by = Some(at(45));
+    later.alert.evidence.whom = "Heron ward, bed 9".into();
+    let first = notice(NoticeReason::Raised);
+    let recipient = Private::new("pharmacy@saltmere.example");
+    let posts: Vec<Post<'_>> = [&withdrawn, &later, &first]
+        .into_iter()
+        .map(|notice| Post { notice, recipient: &recipient, message_id: "m@x.example", name: None })
+        .collect();
+    let envelope = Envelope { recipient: &recipient, message_id: "d@x.example", at: at(1) };
+    let message = String::from_utf8(press(false).print(&Sheet::Digest(envelope, &posts))).unwrap();
+    assert!(message.contains("Subject: Ebbmark call: 3 messages at once, first answer by "));
+    let (text, html) = bodies(&message);
+    insta::assert_snapshot!("digest", text);
+    for part in ["1. CALL: Heron ward, bed 4", "2. CALL: Heron ward, bed 9", "3. WITHDRAWN"] {
+        assert!(text.contains(part) && words(&html).contains(part), "{part} in {text}");
+    }
+    assert_eq!(text.matches("What was seen".to_uppercase().as_str()).count(), 2);
+    assert!(!html.contains("cid:"), "a digest does without pictures");
+}
+
+/// Wording and layout as people get them; what they must say is checked above.
+#[test]
+fn wording_is_as_last_read_by_a_person() {
+    for (name, reason) in [
+        ("raised", NoticeReason::Raised),
+        ("escalated", NoticeReason::Escalated),
+        ("withdrawn", NoticeReason::Withdrawn),
     ] {
-        let text = plain(&message(&notice(reason), false)).to_lowercase();
-        assert!(!text.contains("safe") && !text.contains("stop the"), "{text}");
+        insta::assert_snapshot!(name, bodies(&message(&notice(reason), false)).0);
     }
 }
