@@ -15,6 +15,9 @@ use std::panic::{AssertUnwindSafe, catch_unwind};
 use std::sync::Arc;
 use tokio::sync::{Notify, mpsc, watch};
 
+/// So many messages due to one person at once become one.
+const DIGEST_FROM: usize = 5;
+
 /// The thread's own state.
 pub(super) struct Keeper {
     pub(super) store: Store,
@@ -79,9 +82,10 @@ impl Keeper {
                 }
                 Command::Advance(reply) => self.answer(reply, Keeper::advance),
                 Command::Claim(limit, reply) => self.answer(reply, |keeper| keeper.claim(limit)),
-                Command::Settle(id, sending, reply) => {
-                    self.answer(reply, |keeper| keeper.settle(id, &sending))
+                Command::Settle(rows, sending, reply) => {
+                    self.answer(reply, |keeper| keeper.settle(&rows, &sending))
                 }
+                Command::Hurry(reply) => self.answer(reply, Keeper::hurry),
                 Command::NextMessage(reply) => {
                     self.answer(reply, |keeper| keeper.store.next_message())
                 }
@@ -165,28 +169,42 @@ impl Keeper {
         })
     }
 
+    /// Gathers digests where one person would get many messages at once, then claims.
     fn claim(&mut self, limit: usize) -> Result<Vec<Outgoing>, StoreError> {
-        let now = self.now();
-        let change = self.store.write(now)?;
-        let claimed = change.claim(limit)?;
-        change.commit()?;
+        let mut claimed = Vec::new();
+        self.change(|pen| {
+            for crowd in pen.change.crowded(DIGEST_FROM)? {
+                pen.digest(&crowd)?;
+            }
+            claimed = pen.change.claim(limit)?;
+            Ok(())
+        })?;
         Ok(claimed)
     }
 
-    fn settle(&mut self, id: i64, sending: &Sending) -> Result<(), StoreError> {
+    fn settle(&mut self, rows: &[i64], sending: &Sending) -> Result<(), StoreError> {
         self.change(|pen| {
-            let (alert, step, recipient) = pen.change.settle(id, sending)?;
-            let body = match sending {
-                Sending::Sent { .. } => Body::Told { alert, step, recipient },
-                Sending::Refused { .. } => Body::Refused { alert, step, recipient },
-                Sending::Waiting { .. } => return Ok(()),
-            };
-            pen.fact(
-                Draft { occurred_at: None, source: Source::Service, patient: None, body },
-                None,
-            )
+            for &row in rows {
+                let (alert, step, recipient) = pen.change.settle(row, sending)?;
+                let body = match sending {
+                    Sending::Sent { .. } => Body::Told { alert, step, recipient },
+                    Sending::Refused { .. } => Body::Refused { alert, step, recipient },
+                    Sending::Waiting { .. } => continue,
+                };
+                let source = Source::Service;
+                pen.fact(Draft { occurred_at: None, source, patient: None, body }, None)?;
+            }
+            Ok(())
         })
         .map(|_| ())
+    }
+
+    fn hurry(&mut self) -> Result<usize, StoreError> {
+        let now = self.now();
+        let change = self.store.write(now)?;
+        let hurried = change.hurry()?;
+        change.commit()?;
+        Ok(hurried)
     }
 
     fn put_in_force(&mut self, kind: TextKind, text: String) -> Result<bool, StoreError> {

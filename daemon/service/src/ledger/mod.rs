@@ -103,8 +103,28 @@ pub struct Post<'a> {
     pub name: Option<&'a Private>,
 }
 
-/// Makes the whole message. Pure: the same post gives the same bytes.
-pub type Render = Box<dyn Fn(&Post<'_>) -> Vec<u8> + Send>;
+/// A message to be made.
+#[derive(Debug, Clone, Copy)]
+pub enum Sheet<'a> {
+    /// About one notice.
+    Letter(Post<'a>),
+    /// About many notices to one person.
+    Digest(Envelope<'a>, &'a [Post<'a>]),
+}
+
+/// What a message that is not about one notice is called, and to whom it goes.
+#[derive(Debug, Clone, Copy)]
+pub struct Envelope<'a> {
+    /// To whom: an address.
+    pub recipient: &'a Private,
+    /// The message's identity, without angle brackets.
+    pub message_id: &'a str,
+    /// As of when.
+    pub at: At,
+}
+
+/// Makes the whole message, headers and all. Pure: the same sheet gives the same bytes.
+pub type Render = Box<dyn Fn(&Sheet<'_>) -> Vec<u8> + Send>;
 
 /// What the ledger needs of the outside.
 pub struct Parts {
@@ -142,7 +162,8 @@ enum Command {
     Trouble(Trouble, bool, Reply<bool>),
     Advance(Reply<Tally>),
     Claim(usize, Reply<Vec<Outgoing>>),
-    Settle(i64, Sending, Reply<()>),
+    Settle(Vec<i64>, Sending, Reply<()>),
+    Hurry(Reply<usize>),
     NextMessage(Reply<Option<At>>),
 }
 
@@ -255,12 +276,21 @@ impl Ledger {
         self.ask(|reply| Command::Claim(limit, reply)).await
     }
 
-    /// Records how a claimed message ended. `Sent` and `Refused` become facts in the same transaction.
+    /// Records how a claimed message ended, for each of its rows. `Sent` and `Refused` become facts in the same
+    /// transaction.
     ///
     /// # Errors
     /// The message was not claimed, or the ledger has stopped or stops now.
-    pub async fn settle(&self, id: i64, sending: Sending) -> Result<(), StoreError> {
-        self.ask(|reply| Command::Settle(id, sending, reply)).await
+    pub async fn settle(&self, rows: Vec<i64>, sending: Sending) -> Result<(), StoreError> {
+        self.ask(|reply| Command::Settle(rows, sending, reply)).await
+    }
+
+    /// Lets every message that waits go now: the server takes mail again. Gives how many.
+    ///
+    /// # Errors
+    /// The ledger has stopped or stops now.
+    pub async fn hurry(&self) -> Result<usize, StoreError> {
+        self.ask(Command::Hurry).await
     }
 
     /// When the next message is due, if any waits.

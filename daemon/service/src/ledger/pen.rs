@@ -2,12 +2,13 @@
 
 use super::keeper::Shelf;
 use super::known::Known;
-use super::{Arrival, Draft, Post, Reading, Render, Tally};
-use crate::store::outbox::message_id;
+use super::{Arrival, Draft, Envelope, Post, Reading, Render, Sheet, Tally};
+use crate::store::outbox::{Crowd, digest_id, message_id};
 use crate::store::{Held, Outcome, StoreError, Taken, What, Writing};
 use ebbmark_rules::alert::{Decision, Notice};
 use ebbmark_rules::decide::Decider;
 use ebbmark_rules::fact::{At, Fact};
+use std::panic::{AssertUnwindSafe, catch_unwind};
 
 /// What writes within one transaction.
 pub(super) struct Pen<'a, 'store> {
@@ -102,10 +103,44 @@ impl Pen<'_, '_> {
         for recipient in &notice.recipients {
             let id = message_id(&notice.alert.id, notice.step, recipient, self.domain);
             let name = notice.alert.patient.as_ref().and_then(|patient| self.known.name(patient));
-            let bytes = (self.render)(&Post { notice, recipient, message_id: &id, name });
+            let bytes =
+                (self.render)(&Sheet::Letter(Post { notice, recipient, message_id: &id, name }));
             self.change.post(notice, recipient, &id, &bytes)?;
             self.tally.posted += 1;
         }
         Ok(())
+    }
+
+    /// One message in place of many.
+    pub(super) fn digest(&mut self, crowd: &Crowd) -> Result<(), StoreError> {
+        let mut notices = Vec::with_capacity(crowd.messages.len());
+        for message in &crowd.messages {
+            let Some(notice) = self.change.notice(&message.alert, message.step)? else {
+                // Each goes out on its own: nothing is lost.
+                tracing::error!(message = message.row, "a message has no decision behind it");
+                return Ok(());
+            };
+            notices.push((message, notice));
+        }
+        let posts: Vec<Post<'_>> = notices
+            .iter()
+            .map(|(message, notice)| Post {
+                notice,
+                recipient: &crowd.recipient,
+                message_id: &message.message_id,
+                name: notice.alert.patient.as_ref().and_then(|patient| self.known.name(patient)),
+            })
+            .collect();
+        let id = digest_id(crowd, self.domain);
+        let envelope = Envelope { recipient: &crowd.recipient, message_id: &id, at: self.now };
+        // The letters are made already; where one of them all fails, they go out as they are.
+        let work = AssertUnwindSafe(|| (self.render)(&Sheet::Digest(envelope, &posts)));
+        match catch_unwind(work) {
+            Ok(bytes) => self.change.gather(crowd, &id, &bytes),
+            Err(_) => {
+                tracing::error!("laying out a digest failed in a way that it should not");
+                Ok(())
+            }
+        }
     }
 }

@@ -8,12 +8,15 @@
 //!                     waiting -----------> moot     (somebody answered the alert while it waited)
 //! ```
 //!
+//! Several messages that are due to one recipient at once are gathered into a digest, which goes out in their place: they
+//! move together from then on, and each still settles for its own alert.
+//!
 //! A claim is committed before anyone connects. A message found claimed at a start fell into the gap in which nobody
 //! knows whether the server took it: it waits and goes out again, the same bytes under the same Message-ID.
 
 use super::write::Writing;
 use super::{Store, StoreError, audit, micros, moment};
-use ebbmark_rules::alert::{Notice, NoticeReason};
+use ebbmark_rules::alert::{Decision, Notice, NoticeReason};
 use ebbmark_rules::fact::At;
 use ebbmark_rules::ids::{AlertId, ContentHash, Private};
 use rusqlite::{OptionalExtension, params};
@@ -21,8 +24,10 @@ use rusqlite::{OptionalExtension, params};
 /// A message on its way out.
 #[derive(Debug, Clone, PartialEq)]
 pub struct Outgoing {
-    /// Its row.
+    /// Its row; a digest's first.
     pub id: i64,
+    /// All rows that it settles: one, or those of a digest.
+    pub rows: Vec<i64>,
     /// About which alert.
     pub alert: AlertId,
     /// About which notice of it.
@@ -38,6 +43,31 @@ pub struct Outgoing {
     /// When it was put in the outbox.
     pub created_at: At,
 }
+
+/// Messages that are due to one recipient at once.
+#[derive(Debug, Clone, PartialEq, Eq)]
+pub struct Crowd {
+    /// Who would get them all.
+    pub recipient: Private,
+    /// The messages, in the order in which they were posted.
+    pub messages: Vec<Crowded>,
+}
+
+/// One of them.
+#[derive(Debug, Clone, PartialEq, Eq)]
+pub struct Crowded {
+    /// Its row.
+    pub row: i64,
+    /// About which alert.
+    pub alert: AlertId,
+    /// About which notice of it.
+    pub step: u32,
+    /// Its identity.
+    pub message_id: String,
+}
+
+/// More messages than this make a second digest: nobody reads longer ones.
+const DIGEST_MOST: i64 = 20;
 
 /// A message's bytes; `Debug` says only how many.
 #[derive(Clone, PartialEq, Eq)]
@@ -75,6 +105,13 @@ pub enum Sending {
 pub fn message_id(alert: &AlertId, step: u32, recipient: &Private, domain: &str) -> String {
     let name = format!("{}\n{step}\n{}", alert.as_str(), recipient.expose());
     let hash = ContentHash::of(name.as_bytes());
+    format!("{}@{domain}", hash.as_str().get(..40).unwrap_or_default())
+}
+
+/// A digest's identity: a function of the messages in whose place it goes.
+pub fn digest_id(crowd: &Crowd, domain: &str) -> String {
+    let ids: Vec<&str> = crowd.messages.iter().map(|message| message.message_id.as_str()).collect();
+    let hash = ContentHash::of(format!("digest\n{}", ids.join("\n")).as_bytes());
     format!("{}@{domain}", hash.as_str().get(..40).unwrap_or_default())
 }
 
@@ -134,44 +171,160 @@ impl Writing<'_> {
             .map_err(StoreError::sql("look a message up in"))
     }
 
-    /// Claims up to `limit` messages that are due, oldest first. Commit before connecting.
-    pub fn claim(&self, limit: usize) -> Result<Vec<Outgoing>, StoreError> {
-        let read = || StoreError::sql("claim messages in");
+    /// The first attempts that are due, by recipient, where one has at least `least` of them: what a digest is made of.
+    pub fn crowded(&self, least: usize) -> Result<Vec<Crowd>, StoreError> {
+        let read = || StoreError::sql("look for a digest in");
+        let now = micros(self.at());
+        let recipients = self
+            .sql()
+            .prepare_cached(
+                "SELECT recipient FROM outbox WHERE state = 'pending' AND next_try_us <= ? AND digest IS NULL
+                 GROUP BY recipient HAVING count(*) >= ? ORDER BY recipient",
+            )
+            .and_then(|mut query| {
+                query
+                    .query_map(params![now, i64::try_from(least).unwrap_or(i64::MAX)], |row| row.get(0))?
+                    .collect::<Result<Vec<String>, _>>()
+            })
+            .map_err(read())?;
         let mut query = self
             .sql()
             .prepare_cached(
-                "SELECT id, alert, step, recipient, message_id, bytes, attempts, created_us FROM outbox
-                 WHERE state IN ('pending', 'waiting') AND next_try_us <= ? ORDER BY next_try_us, id LIMIT ?",
+                "SELECT id, alert, step, message_id FROM outbox
+                 WHERE recipient = ? AND state = 'pending' AND next_try_us <= ? AND digest IS NULL
+                 ORDER BY id LIMIT ?",
             )
             .map_err(read())?;
-        let due = query
-            .query_map(
-                params![micros(self.at()), i64::try_from(limit).unwrap_or(i64::MAX)],
-                |row| {
-                    Ok(Outgoing {
-                        id: row.get(0)?,
-                        alert: AlertId::new(row.get::<_, String>(1)?),
+        let mut crowds = Vec::new();
+        for recipient in recipients {
+            let messages = query
+                .query_map(params![recipient, now, DIGEST_MOST], |row| {
+                    let alert = AlertId::new(row.get::<_, String>(1)?);
+                    Ok(Crowded {
+                        row: row.get(0)?,
+                        alert,
                         step: row.get(2)?,
-                        recipient: Private::new(row.get::<_, String>(3)?),
-                        message_id: row.get(4)?,
-                        bytes: Bytes(row.get(5)?),
-                        attempts: row.get(6)?,
-                        created_at: moment(row.get(7)?),
+                        message_id: row.get(3)?,
                     })
-                },
+                })
+                .and_then(Iterator::collect::<Result<Vec<_>, _>>)
+                .map_err(read())?;
+            crowds.push(Crowd { recipient: Private::new(recipient), messages });
+        }
+        Ok(crowds)
+    }
+
+    /// Puts a digest in the place of messages that were never tried.
+    ///
+    /// # Errors
+    /// One of them was tried or is in a digest, or the store failed.
+    pub fn gather(&self, crowd: &Crowd, message_id: &str, bytes: &[u8]) -> Result<(), StoreError> {
+        let fail = || StoreError::sql("gather a digest in");
+        self.sql()
+            .prepare_cached("INSERT INTO digest (message_id, bytes, created_us) VALUES (?, ?, ?)")
+            .and_then(|mut insert| insert.execute(params![message_id, bytes, micros(self.at())]))
+            .map_err(fail())?;
+        let digest = self.sql().last_insert_rowid();
+        for message in &crowd.messages {
+            self.sql()
+                .prepare_cached("UPDATE outbox SET digest = ? WHERE id = ?")
+                .and_then(|mut update| update.execute([digest, message.row]))
+                .map_err(fail())?;
+            let text = format!("in digest {digest} {}", ContentHash::of(bytes).as_str());
+            audit::append(self.sql(), self.at(), &format!("message {}", message.row), &text)?;
+        }
+        Ok(())
+    }
+
+    /// The notice that a message is about.
+    pub fn notice(&self, alert: &AlertId, step: u32) -> Result<Option<Notice>, StoreError> {
+        let bodies = self
+            .sql()
+            .prepare_cached(
+                "SELECT body FROM decision WHERE alert = ? AND kind = 'tell' ORDER BY seq",
             )
+            .and_then(|mut query| {
+                query
+                    .query_map([alert.as_str()], |row| row.get(0))?
+                    .collect::<Result<Vec<String>, _>>()
+            })
+            .map_err(StoreError::sql("look a notice up in"))?;
+        for body in bodies {
+            if let Decision::Tell(notice) = super::read::parse("decision", &body)?
+                && notice.step == step
+            {
+                return Ok(Some(*notice));
+            }
+        }
+        Ok(None)
+    }
+
+    /// Claims up to `limit` messages that are due: the highest tier first, within it the one that has waited longest.
+    /// Commit before connecting.
+    pub fn claim(&self, limit: usize) -> Result<Vec<Outgoing>, StoreError> {
+        let read = || StoreError::sql("claim messages in");
+        let now = micros(self.at());
+        // The messages of a digest count as one. Beside `min(id)` the plain columns are those of that row.
+        let mut query = self
+            .sql()
+            .prepare_cached(
+                "SELECT min(outbox.id), alert.id, step, recipient, coalesce(digest.message_id, outbox.message_id),
+                        coalesce(digest.bytes, outbox.bytes), attempts, coalesce(digest.created_us, outbox.created_us),
+                        digest.id
+                 FROM outbox JOIN alert ON alert.id = outbox.alert LEFT JOIN digest ON digest.id = outbox.digest
+                 WHERE outbox.state IN ('pending', 'waiting') AND next_try_us <= ?
+                 GROUP BY coalesce(-digest.id, outbox.id)
+                 ORDER BY alert.tier_rank DESC, next_try_us, outbox.id LIMIT ?",
+            )
+            .map_err(read())?;
+        let mut due = query
+            .query_map(params![now, i64::try_from(limit).unwrap_or(i64::MAX)], |row| {
+                let message = Outgoing {
+                    id: row.get(0)?,
+                    rows: vec![row.get(0)?],
+                    alert: AlertId::new(row.get::<_, String>(1)?),
+                    step: row.get(2)?,
+                    recipient: Private::new(row.get::<_, String>(3)?),
+                    message_id: row.get(4)?,
+                    bytes: Bytes(row.get(5)?),
+                    attempts: row.get(6)?,
+                    created_at: moment(row.get(7)?),
+                };
+                Ok((message, row.get::<_, Option<i64>>(8)?))
+            })
             .and_then(Iterator::collect::<Result<Vec<_>, _>>)
             .map_err(read())?;
-        for message in &due {
-            self.sql()
-                .prepare_cached(
-                    "UPDATE outbox SET state = 'claimed', attempts = attempts + 1 WHERE id = ?",
-                )
-                .and_then(|mut update| update.execute([message.id]))
-                .map_err(read())?;
-            audit::append(self.sql(), self.at(), &format!("message {}", message.id), "claimed")?;
+        for (message, digest) in &mut due {
+            if let Some(digest) = digest {
+                message.rows = self
+                    .sql()
+                    .prepare_cached(
+                        "SELECT id FROM outbox WHERE digest = ? AND state IN ('pending', 'waiting') ORDER BY id",
+                    )
+                    .and_then(|mut query| query.query_map([*digest], |row| row.get(0))?.collect())
+                    .map_err(read())?;
+            }
+            for row in &message.rows {
+                self.sql()
+                    .prepare_cached(
+                        "UPDATE outbox SET state = 'claimed', attempts = attempts + 1 WHERE id = ?",
+                    )
+                    .and_then(|mut update| update.execute([row]))
+                    .map_err(read())?;
+                audit::append(self.sql(), self.at(), &format!("message {row}"), "claimed")?;
+            }
         }
-        Ok(due)
+        Ok(due.into_iter().map(|(message, _)| message).collect())
+    }
+
+    /// Messages that wait are tried now: the server is back.
+    pub fn hurry(&self) -> Result<usize, StoreError> {
+        self.sql()
+            .execute(
+                "UPDATE outbox SET next_try_us = ?1 WHERE state = 'waiting' AND next_try_us > ?1",
+                [micros(self.at())],
+            )
+            .map_err(StoreError::sql("hurry messages in"))
     }
 
     /// Records how a claimed message ended; gives what it was about.

@@ -259,7 +259,7 @@ impl Reader {
     }
 }
 
-fn parse<T: DeserializeOwned>(table: &'static str, body: &str) -> Result<T, StoreError> {
+pub(super) fn parse<T: DeserializeOwned>(table: &'static str, body: &str) -> Result<T, StoreError> {
     // serde's own message may quote the text, which may be a patient's: say only where it broke.
     serde_json::from_str(body).map_err(|error| StoreError::Row {
         table,

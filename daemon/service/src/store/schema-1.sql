@@ -86,8 +86,18 @@ CREATE UNIQUE INDEX alert_one_open ON alert (coalesce(issuer, ''), coalesce(numb
     WHERE state IN ('open', 'acknowledged');
 CREATE INDEX alert_raised ON alert (raised_us);
 
+-- One message in place of several that were due to one recipient at once.
+CREATE TABLE digest (
+    id         INTEGER PRIMARY KEY,
+    message_id TEXT NOT NULL UNIQUE,
+    bytes      BLOB NOT NULL,
+    created_us INTEGER NOT NULL
+) STRICT;
+CREATE TRIGGER digest_only_grows BEFORE UPDATE ON digest BEGIN SELECT raise(ABORT, 'digests are never changed'); END;
+CREATE TRIGGER digest_keeps BEFORE DELETE ON digest BEGIN SELECT raise(ABORT, 'digests are never deleted'); END;
+
 -- One message to one recipient about one step of one alert; its bytes are rendered once. `asks`: it asks for an answer,
--- so that retrying it is pointless once somebody gave one.
+-- so that retrying it is pointless once somebody gave one. `digest`: what goes out in its place.
 CREATE TABLE outbox (
     id          INTEGER PRIMARY KEY,
     alert       TEXT NOT NULL REFERENCES alert (id),
@@ -103,13 +113,18 @@ CREATE TABLE outbox (
     next_try_us INTEGER NOT NULL,
     settled_us  INTEGER,
     reply       TEXT NOT NULL DEFAULT '',
+    digest      INTEGER REFERENCES digest (id),
     CHECK ((settled_us IS NOT NULL) = (state IN ('sent', 'refused', 'moot'))),
     UNIQUE (alert, step, recipient)
 ) STRICT;
 CREATE INDEX outbox_due ON outbox (next_try_us) WHERE state IN ('pending', 'waiting');
+CREATE INDEX outbox_digest ON outbox (digest) WHERE digest IS NOT NULL;
 CREATE TRIGGER outbox_message_is_rendered_once
     BEFORE UPDATE OF alert, step, recipient, role, asks, message_id, bytes ON outbox
     BEGIN SELECT raise(ABORT, 'a message is never changed'); END;
+CREATE TRIGGER outbox_digest_is_for_good
+    BEFORE UPDATE OF digest ON outbox WHEN OLD.digest IS NOT NULL OR OLD.attempts > 0
+    BEGIN SELECT raise(ABORT, 'a message that may have gone out is never put into a digest'); END;
 CREATE TRIGGER outbox_moves
     BEFORE UPDATE OF state ON outbox
     WHEN NOT ((OLD.state IN ('pending', 'waiting') AND NEW.state = 'claimed')

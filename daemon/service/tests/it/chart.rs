@@ -112,9 +112,10 @@ async fn file_that_makes_the_ledger_fail_is_held_in_the_end() {
     let fails = || {
         let settings = ebbmark::settings::Settings::read(&house.settings_file()).unwrap();
         let render = ebbmark::mail::renderer(&settings);
-        let faulty: ebbmark::ledger::Render = Box::new(move |post| {
+        let faulty: ebbmark::ledger::Render = Box::new(move |sheet| {
+            let ebbmark::ledger::Sheet::Letter(post) = sheet else { return render(sheet) };
             assert!(!post.notice.alert.evidence.whom.contains("bed 1"), "a fault in laying out");
-            render(post)
+            render(sheet)
         });
         (settings, faulty)
     };

@@ -51,6 +51,8 @@ fn notice(id: &str, step: u32, reason: NoticeReason) -> Notice {
         recipients: vec![Private::new("nurse@saltmere.example")],
         at: at(0),
         answer_by: None,
+        then: None,
+        because: "".into(),
         alert: alert(id),
     }
 }
@@ -116,6 +118,43 @@ fn waiting_message_keeps_its_bytes_and_its_id() {
     let second = claim(&mut store, 30);
     assert_eq!((&second[0].bytes, &second[0].message_id), (&first[0].bytes, &first[0].message_id));
     assert_eq!(second[0].attempts, 1);
+}
+
+/// Messages in a digest move together, keep its bytes and id over a crash, and can't be put into another.
+#[test]
+fn digest_moves_as_one_and_stays_the_same() {
+    let (_folder, path, mut store) = posted();
+    let change = store.write(at(0)).unwrap();
+    for (step, reason) in [(1, NoticeReason::Escalated), (2, NoticeReason::TierRaised)] {
+        post(&change, &notice("a", step, reason));
+    }
+    change.commit().unwrap();
+    let change = store.write(at(1)).unwrap();
+    assert_eq!(change.crowded(4).unwrap(), []);
+    let crowds = change.crowded(3).unwrap();
+    assert_eq!(crowds.len(), 1);
+    change.gather(&crowds[0], "digest@saltmarsh.example", b"all three").unwrap();
+    assert!(change.gather(&crowds[0], "other@saltmarsh.example", b"again").is_err());
+    drop(change);
+    let change = store.write(at(1)).unwrap();
+    change.gather(&crowds[0], "digest@saltmarsh.example", b"all three").unwrap();
+    change.commit().unwrap();
+
+    let first = claim(&mut store, 1);
+    assert_eq!((first.len(), first[0].rows.len()), (1, 3));
+    assert_eq!(first[0].bytes.0, b"all three");
+    drop(store);
+    let mut store = Store::open(&path).unwrap();
+    let change = store.write(at(60)).unwrap();
+    assert_eq!(change.unclaim().unwrap(), 3);
+    change.commit().unwrap();
+    let again = claim(&mut store, 60);
+    assert_eq!(again.len(), 1);
+    assert_eq!((&again[0].bytes, &again[0].message_id), (&first[0].bytes, &first[0].message_id));
+    for row in &again[0].rows {
+        settle(&mut store, 61, *row, &Sending::Sent { reply: "250 ok".to_owned() }).unwrap();
+    }
+    assert_eq!(counts(&path), [("sent".to_owned(), 3)]);
 }
 
 #[test]

@@ -131,6 +131,46 @@ async fn unanswered_alert_goes_to_the_next_role_and_an_answer_ends_that() {
     service.stop().await.unwrap();
 }
 
+/// Many alerts in one moment are one message to a person, and each of them is told.
+#[tokio::test(flavor = "multi_thread")]
+async fn many_alerts_at_once_are_one_message_and_each_is_told() {
+    let house = House::new();
+    let (service, _hand) = ward(&house).await;
+    let patients = 12;
+    let drafts = (0..patients).flat_map(|number: usize| {
+        let patient = PatientId::new("saltmarsh", &number.to_string());
+        admitted_with_qt(520.0).into_iter().map(move |draft| Draft {
+            patient: patient.clone(),
+            source: Source::File {
+                file: ContentHash::of(b"a file"),
+                place: format!("row {number}").into(),
+                assumed_zone: None,
+            },
+            ..draft
+        })
+    });
+    service.ledger().learn(drafts.collect()).await.unwrap();
+    tokio::task::block_in_place(|| house.wait_mails_to("tern-nurse", 1));
+    let told = || {
+        let alerts = Reader::open(&house.store()).unwrap().alerts(true).unwrap();
+        let is_told = |decision: &Decision| {
+            matches!(decision, Decision::Life { step: LifeStep::Told { recipient }, .. }
+                if recipient.expose().starts_with("tern-nurse"))
+        };
+        alerts.iter().filter(|row| row.life.iter().any(is_told)).count()
+    };
+    let until = std::time::Instant::now() + std::time::Duration::from_secs(60);
+    while told() < patients {
+        assert!(std::time::Instant::now() < until, "{} of {patients} told", told());
+        tokio::time::sleep(std::time::Duration::from_millis(20)).await;
+    }
+    assert_eq!(house.mails_to("tern-nurse"), 1);
+    let mail = house.mails().into_iter().find(|mail| mail.contains("To: tern-nurse")).unwrap();
+    assert!(mail.contains("Subject: Ebbmark call: 12 messages at once, first answer by"), "{mail}");
+    assert_eq!(Reader::open(&house.store()).unwrap().audit().unwrap().broken, None);
+    service.stop().await.unwrap();
+}
+
 #[tokio::test(flavor = "multi_thread")]
 async fn restart_gives_the_same_decisions_and_tells_nobody_again() {
     let house = House::new();
