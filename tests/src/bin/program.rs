@@ -1,0 +1,7 @@
+//! The program as people start it.
+
+use std::process::ExitCode;
+
+fn main() -> ExitCode {
+    ebbmark::commands::run()
+}
