@@ -118,12 +118,12 @@ fn killed_at_any_moment_it_loses_nothing_and_tells_nothing_twice() {
     expected.sort();
     assert_eq!(calls, expected, "one call for each patient");
     // A message sent twice is the same file again; two files are two messages. Those in a digest are one.
-    let sent: usize = rusqlite::Connection::open(house.store().database())
+    let sent: u32 = rusqlite::Connection::open(house.store().database())
         .and_then(|store| {
             store.query_row("SELECT count(DISTINCT coalesce(-digest, id)) FROM outbox", [], |row| {
                 row.get(0)
             })
         })
         .unwrap();
-    assert_eq!(house.mails().len(), sent);
+    assert_eq!(house.mails().len(), sent as usize);
 }
