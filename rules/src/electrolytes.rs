@@ -40,12 +40,25 @@ pub enum NotConverted {
 }
 
 impl Analyte {
+    /// All of them.
+    pub const ALL: [Analyte; 6] = [
+        Analyte::Potassium,
+        Analyte::Magnesium,
+        Analyte::CalciumTotal,
+        Analyte::CalciumIonised,
+        Analyte::Albumin,
+        Analyte::Creatinine,
+    ];
+
     /// The unit in which facts hold it.
     pub fn canonical(self) -> &'static str {
         match self {
             Analyte::Albumin => "g/L",
             Analyte::Creatinine => "umol/L",
-            _ => "mmol/L",
+            Analyte::Potassium
+            | Analyte::Magnesium
+            | Analyte::CalciumTotal
+            | Analyte::CalciumIonised => "mmol/L",
         }
     }
 
@@ -96,9 +109,39 @@ impl Analyte {
     fn known_units(self) -> &'static str {
         match self {
             Analyte::Albumin => "g/L, g/dL",
-            Analyte::Creatinine => "umol/L, mg/dL",
-            _ => "mmol/L, mEq/L, mg/dL, mg/L",
+            Analyte::Creatinine => "umol/L, mg/dL, mg/L",
+            Analyte::Potassium
+            | Analyte::Magnesium
+            | Analyte::CalciumTotal
+            | Analyte::CalciumIonised => "mmol/L, mEq/L, mg/dL, mg/L",
         }
+    }
+
+    /// What a number in this unit is multiplied with to come to the canonical one. Units are known by their exact
+    /// spelling, upper and lower case: `mg` and `Mg` are different things.
+    ///
+    /// # Errors
+    /// The unit is missing or not known for this analyte.
+    pub fn factor(self, unit: &str) -> Result<f64, NotConverted> {
+        let unit = unit.trim();
+        let factor = match unit {
+            "" => return Err(NotConverted::NoUnit(self)),
+            "mmol/L" | "mmol/l" => self.per_meq().map(|_| 1.0),
+            "meq/L" | "mEq/L" | "mEq/l" | "meq/l" | "mval/L" => self.per_meq(),
+            "mg/dL" | "mg/dl" => self.per_mg_dl(),
+            "mg/L" | "mg/l" => self.per_mg_dl().map(|factor| factor / 10.0),
+            "umol/L" | "umol/l" | "µmol/L" | "μmol/L" | "µmol/l" | "μmol/l" => {
+                (self == Analyte::Creatinine).then_some(1.0)
+            }
+            "g/L" | "g/l" => (self == Analyte::Albumin).then_some(1.0),
+            "g/dL" | "g/dl" => (self == Analyte::Albumin).then_some(10.0),
+            _ => None,
+        };
+        factor.ok_or_else(|| NotConverted::Unit {
+            analyte: self,
+            unit: unit.chars().take(16).collect(),
+            known: self.known_units(),
+        })
     }
 
     /// A number with its unit, in the canonical unit. Worked: magnesium 1.5 mEq/L is 0.75 mmol/L; calcium 8.0 mg/dL is
@@ -107,29 +150,8 @@ impl Analyte {
     /// # Errors
     /// The unit is missing or unknown for this analyte, or the value is implausible once converted.
     pub fn convert(self, number: f64, unit: &str) -> Result<f64, NotConverted> {
-        let unit = unit.trim();
-        let factor = match unit {
-            "" => return Err(NotConverted::NoUnit(self)),
-            "mmol/L" | "mmol/l" if !matches!(self, Analyte::Albumin | Analyte::Creatinine) => {
-                Some(1.0)
-            }
-            "meq/L" | "mEq/L" | "mEq/l" | "meq/l" | "mval/L" => self.per_meq(),
-            "mg/dL" | "mg/dl" => self.per_mg_dl(),
-            "mg/L" | "mg/l" => self.per_mg_dl().map(|factor| factor / 10.0),
-            "umol/L" | "umol/l" | "µmol/L" | "μmol/L" | "µmol/l" | "μmol/l" => {
-                matches!(self, Analyte::Creatinine).then_some(1.0)
-            }
-            "g/L" | "g/l" => matches!(self, Analyte::Albumin).then_some(1.0),
-            "g/dL" | "g/dl" => matches!(self, Analyte::Albumin).then_some(10.0),
-            _ => None,
-        };
-        let factor = factor.ok_or_else(|| NotConverted::Unit {
-            analyte: self,
-            unit: unit.chars().take(16).collect(),
-            known: self.known_units(),
-        })?;
+        let value = number * self.factor(unit)?;
         let (low, high) = self.plausible();
-        let value = number * factor;
         if !(low..=high).contains(&value) {
             return Err(NotConverted::Implausible {
                 analyte: self,

@@ -118,7 +118,7 @@ fn why(view: &View<'_>) -> Vec<Box<str>> {
         Some(age) => add(format!("{age} years, {sex}")),
         None => add(format!("age not known, {sex}")),
     }
-    match view.active().count() {
+    match view.prolonging().count() {
         0 => {}
         1 => add("one listed medicine is active".into()),
         n => add(format!("{n} listed medicines are active")),
@@ -237,6 +237,8 @@ fn all_unknown(view: &View<'_>, unknown: &[Box<str>]) -> Vec<Box<str>> {
             words::list(&view.not_recognised)
         ));
     }
+    let today = view.now.with_timezone(&view.protocol.zone).date_naive();
+    view.list.doubts(today).into_iter().for_each(&mut add);
     if let Some(reading) = &view.latest {
         if reading.quality == Quality::Doubtful {
             let why = words::list(reading.recorded.tracing.why.iter().map(|why| &**why));

@@ -14,6 +14,7 @@ pub mod kidney;
 pub mod medicines;
 pub mod patient;
 pub mod protocol;
+pub mod routes;
 pub mod score;
 pub mod units;
 pub mod verdict;

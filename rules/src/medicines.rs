@@ -3,12 +3,13 @@
 //! A medicine is found by code, or by a name that is the same after folding case, accents and spaces; never by
 //! likeness. What is neither on the list nor named in `left_out` is "not recognised" and put before the pharmacist.
 
-use crate::fact::{Code, MedicineName};
+use crate::fact::MedicineName;
 use crate::finding::Finding;
+use crate::routes;
 use crate::units::Hours;
 use chrono::NaiveDate;
 use serde::Deserialize;
-use std::collections::BTreeMap;
+use std::collections::{BTreeMap, BTreeSet};
 use toml::Spanned;
 use unicode_normalization::UnicodeNormalization;
 
@@ -28,7 +29,8 @@ pub struct MedicineList {
     medicines: Vec<Medicine>,
     by_name: BTreeMap<String, Vec<usize>>,
     by_code: BTreeMap<String, Vec<usize>>,
-    left_out: BTreeMap<String, ()>,
+    left_out: BTreeSet<String>,
+    left_out_codes: BTreeSet<String>,
 }
 
 /// One substance of the list.
@@ -38,6 +40,11 @@ pub struct Medicine {
     pub substance: String,
     /// The kind of evidence: a key of [`MedicineList::evidence`].
     pub evidence: String,
+    /// What is to be added to that kind's words (`intravenous, high dose`); may be empty.
+    pub evidence_detail: String,
+    /// Does not prolong QT itself: it lowers potassium or magnesium, or slows the heart. It counts only where a rule names
+    /// its evidence, its group or the substance itself, and as a loop diuretic for the Tisdale score.
+    pub indirect: bool,
     /// How long until half is gone; `None` where the list does not say.
     pub half_life: Option<Hours>,
     /// What clears it: `renal`, `cyp3a4`, …
@@ -71,6 +78,8 @@ struct RawFile {
     #[serde(default)]
     left_out: Vec<Spanned<String>>,
     #[serde(default)]
+    left_out_codes: Vec<Spanned<String>>,
+    #[serde(default)]
     medicine: Vec<Spanned<RawMedicine>>,
     #[serde(default)]
     product: Vec<Spanned<RawProduct>>,
@@ -96,15 +105,19 @@ struct RawMedicine {
     #[serde(default)]
     names: Vec<Spanned<String>>,
     evidence: Spanned<String>,
+    #[serde(default)]
+    evidence_detail: String,
+    #[serde(default)]
+    indirect: bool,
     half_life_h: Option<Spanned<f64>>,
     #[serde(default)]
-    cleared_by: Vec<String>,
+    cleared_by: Vec<Spanned<String>>,
     #[serde(default)]
-    inhibits: Vec<String>,
+    inhibits: Vec<Spanned<String>>,
     #[serde(default)]
     groups: Vec<String>,
     #[serde(default)]
-    routes: Vec<String>,
+    routes: Vec<Spanned<String>>,
     #[serde(default)]
     note: String,
     /// How sure the list's maker is; for the reader of the file.
@@ -128,6 +141,25 @@ pub fn folded(name: &str) -> String {
     plain.collect::<String>().to_lowercase().split_whitespace().collect::<Vec<_>>().join(" ")
 }
 
+/// Ways by which a medicine leaves the body, and which another may inhibit.
+const PATHS: [&str; 15] = [
+    "renal",
+    "renal-secretion",
+    "hepatic",
+    "biliary",
+    "faecal",
+    "cyp1a2",
+    "cyp2b6",
+    "cyp2c8",
+    "cyp2c9",
+    "cyp2c19",
+    "cyp2d6",
+    "cyp3a4",
+    "p-gp",
+    "nat2",
+    "ugt",
+];
+
 fn code_key(system: &str, code: &str) -> String {
     format!("{}:{}", system.trim().to_ascii_uppercase(), code.trim().to_ascii_uppercase())
 }
@@ -150,7 +182,8 @@ impl MedicineList {
             medicines: Vec::new(),
             by_name: BTreeMap::new(),
             by_code: BTreeMap::new(),
-            left_out: BTreeMap::new(),
+            left_out: BTreeSet::new(),
+            left_out_codes: BTreeSet::new(),
         };
         match (raw.list.approved_by.trim(), raw.list.approved_on) {
             ("", None) => {}
@@ -191,7 +224,24 @@ impl MedicineList {
                     format!("`{}` is on the list and left out of it", name.as_ref()),
                 ));
             }
-            list.left_out.insert(key, ());
+            list.left_out.insert(key);
+        }
+        for code in &raw.left_out_codes {
+            let Some(key) = list.code_of(text, code, &mut wrong) else { continue };
+            if list.by_code.contains_key(&key) {
+                wrong.push(Finding::at(
+                    text,
+                    code.span().start,
+                    format!("the code `{}` is on the list and left out of it", code.as_ref()),
+                ));
+            }
+            list.left_out_codes.insert(key);
+        }
+        if list.medicines.is_empty() {
+            wrong.push(
+                Finding::at(text, 0, "the list names no medicine")
+                    .hint("write at least one [[medicine]]"),
+            );
         }
         if wrong.is_empty() { Ok(list) } else { Err(wrong) }
     }
@@ -221,6 +271,28 @@ impl MedicineList {
                 None
             }
         });
+        let paths = |paths: Vec<Spanned<String>>, wrong: &mut Vec<Finding>| {
+            paths
+                .into_iter()
+                .map(|path| {
+                    if !PATHS.contains(&path.as_ref().as_str()) {
+                        let message = format!("`{}` is not a way of clearance", path.as_ref());
+                        wrong.push(
+                            Finding::at(text, path.span().start, message)
+                                .hint(format!("known are {}", PATHS.join(", "))),
+                        );
+                    }
+                    path.into_inner()
+                })
+                .collect()
+        };
+        for route in raw.routes.iter().filter(|route| routes::usual(route.as_ref()).is_none()) {
+            let message = format!("`{}` is not a route that is known", route.as_ref());
+            wrong.push(
+                Finding::at(text, route.span().start, message)
+                    .hint(format!("known are {}", routes::usual_ones())),
+            );
+        }
         for name in std::iter::once(&raw.substance).chain(&raw.names) {
             self.name(text, name, vec![index], wrong);
         }
@@ -230,11 +302,13 @@ impl MedicineList {
         self.medicines.push(Medicine {
             substance: raw.substance.into_inner(),
             evidence: raw.evidence.into_inner(),
+            evidence_detail: raw.evidence_detail,
+            indirect: raw.indirect,
             half_life,
-            cleared_by: raw.cleared_by,
-            inhibits: raw.inhibits,
+            cleared_by: paths(raw.cleared_by, wrong),
+            inhibits: paths(raw.inhibits, wrong),
             groups: raw.groups,
-            routes: raw.routes,
+            routes: raw.routes.into_iter().map(Spanned::into_inner).collect(),
             note: raw.note,
         });
     }
@@ -289,21 +363,33 @@ impl MedicineList {
         is: Vec<usize>,
         wrong: &mut Vec<Finding>,
     ) {
-        let at = code.span().start;
+        let Some(key) = self.code_of(text, code, wrong) else { return };
+        if self.by_code.insert(key, is).is_some() {
+            wrong.push(Finding::at(
+                text,
+                code.span().start,
+                format!("the code `{}` stands twice", code.as_ref()),
+            ));
+        }
+    }
+
+    fn code_of(
+        &self,
+        text: &str,
+        code: &Spanned<String>,
+        wrong: &mut Vec<Finding>,
+    ) -> Option<String> {
         match code.as_ref().split_once(':') {
             Some((system, number)) if !system.trim().is_empty() && !number.trim().is_empty() => {
-                if self.by_code.insert(code_key(system, number), is).is_some() {
-                    wrong.push(Finding::at(
-                        text,
-                        at,
-                        format!("the code `{}` stands twice", code.as_ref()),
-                    ));
-                }
+                Some(code_key(system, number))
             }
-            _ => wrong.push(
-                Finding::at(text, at, format!("`{}` is not a code with its system", code.as_ref()))
-                    .hint("write for example \"ATC:C01BD01\", \"RxNorm:703\" or \"local:AMIO200\""),
-            ),
+            _ => {
+                let message = format!("`{}` is not a code with its system", code.as_ref());
+                wrong.push(Finding::at(text, code.span().start, message).hint(
+                    "write for example \"ATC:C01BD01\", \"RxNorm:703\" or \"local:AMIO200\"",
+                ));
+                None
+            }
         }
     }
 
@@ -314,23 +400,44 @@ impl MedicineList {
 
     /// What a feed's medicine is: by any of its codes, else by its exact folded name.
     pub fn recognise(&self, medicine: &MedicineName) -> Recognised {
-        let by_code = |code: &Code| self.by_code.get(&code_key(&code.system, &code.code));
+        let keys = || medicine.codes.iter().map(|code| code_key(&code.system, &code.code));
+        if let Some(found) = keys().find_map(|key| self.by_code.get(&key)) {
+            return Recognised::Listed(found.clone());
+        }
+        if keys().any(|key| self.left_out_codes.contains(&key)) {
+            return Recognised::LeftOut;
+        }
         let name = folded(&medicine.text);
-        match medicine.codes.iter().find_map(by_code).or_else(|| self.by_name.get(&name)) {
+        match self.by_name.get(&name) {
             Some(found) => Recognised::Listed(found.clone()),
-            None if self.left_out.contains_key(&name) => Recognised::LeftOut,
+            None if self.left_out.contains(&name) => Recognised::LeftOut,
             None => Recognised::No,
         }
+    }
+
+    /// Why the list itself is not to be relied on at a date, in words; empty where it is signed and not due for review.
+    pub fn doubts(&self, today: NaiveDate) -> Vec<String> {
+        let mut found = Vec::new();
+        if self.approved.is_none() {
+            found.push(format!(
+                "the medicine list \"{}\" is an example that nobody in this hospital has signed",
+                self.name
+            ));
+        }
+        if let Some(by) = self.review_by.filter(|by| *by < today) {
+            found.push(format!("the medicine list was to be reviewed by {by}"));
+        }
+        found
     }
 }
 
 impl Medicine {
-    /// Whether it counts when given by this route (as written by the feed); a feed without a route counts.
+    /// Whether it counts when given by this route, as written by the feed. A feed without a route counts, and so does a
+    /// route that nobody knows.
     pub fn counts_by(&self, route: Option<&str>) -> bool {
-        self.routes.is_empty()
-            || route.is_none_or(|route| {
-                self.routes.iter().any(|own| own.eq_ignore_ascii_case(route.trim()))
-            })
+        let excluded =
+            |route: &str| self.routes.iter().all(|own| routes::same(own, route) == Some(false));
+        self.routes.is_empty() || route.is_none_or(|route| !excluded(route))
     }
 
     /// By what `self` raises the other's exposure, if the list says so: it inhibits what clears the other.
@@ -365,9 +472,11 @@ fn day(
 #[cfg(test)]
 mod tests {
     use super::*;
+    use crate::fact::Code;
 
     const LIST: &str = r#"
 left_out = ["Paracetamol"]
+left_out_codes = ["ATC:S01AE03"]
 [list]
 name = "test"
 version = "1"
@@ -413,6 +522,14 @@ substances = ["haloperidol", "clarithromycin"]
         let code = Code { system: "atc".into(), code: "n05ad01".into() };
         let medicine = MedicineName { codes: vec![code], text: "Haldol Tbl".into() };
         assert_eq!(list.recognise(&medicine), Recognised::Listed(vec![0]));
+        let coded = |code: &str, text: &str| {
+            let code = Code { system: "ATC".into(), code: code.into() };
+            list.recognise(&MedicineName { codes: vec![code], text: text.into() })
+        };
+        assert_eq!(coded("S01AE03", "eye drops"), Recognised::LeftOut);
+        assert_eq!(coded("S01AE03", "haloperidol"), Recognised::LeftOut, "a code says more");
+        assert_eq!(coded("X99XX99", "haloperidol"), Recognised::Listed(vec![0]));
+        assert_eq!(coded("X99XX99", "eye drops"), Recognised::No);
     }
 
     #[test]
@@ -421,8 +538,26 @@ substances = ["haloperidol", "clarithromycin"]
         let [halo, clari] = list.medicines() else { panic!("two") };
         assert_eq!(clari.raises(halo), Some("cyp3a4"));
         assert_eq!(halo.raises(clari), None);
-        assert!(
-            clari.counts_by(None) && clari.counts_by(Some("po")) && !clari.counts_by(Some("TOP"))
+        assert!(clari.counts_by(None) && clari.counts_by(Some("by mouth")));
+        assert!(clari.counts_by(Some("pump 3")), "a route that nobody knows counts");
+        assert!(!clari.counts_by(Some("topical")) && halo.counts_by(Some("topical")));
+    }
+
+    #[test]
+    fn an_unsigned_or_old_list_says_so() {
+        let day = |y, m, d| NaiveDate::from_ymd_opt(y, m, d).unwrap();
+        let list = MedicineList::parse(LIST).unwrap();
+        assert!(list.doubts(day(2027, 1, 1))[0].contains("nobody in this hospital has signed"));
+        let signed = LIST.replacen(
+            "version = \"1\"",
+            "version = \"1\"\napproved_by = \"A. Moss\"\napproved_on = 2027-01-31\nreview_by = 2027-06-30",
+            1,
+        );
+        let list = MedicineList::parse(&signed).unwrap();
+        assert_eq!(list.doubts(day(2027, 6, 30)), Vec::<String>::new());
+        assert_eq!(
+            list.doubts(day(2027, 7, 1)),
+            ["the medicine list was to be reviewed by 2027-06-30"]
         );
     }
 
@@ -442,7 +577,7 @@ substances = ["haloperidol", "clarithromycin"]
         );
         assert!(
             wrong("half_life_h = 20", "half_life_h = -1")
-                .starts_with("line 13, column 15: a half-life")
+                .starts_with("line 14, column 15: a half-life")
         );
         assert!(
             wrong("names = [\"Halopéridol\"]", "names = [\"Invented Pair\"]")
@@ -455,5 +590,34 @@ substances = ["haloperidol", "clarithromycin"]
             wrong("version = \"1\"", "version = \"1\"\napproved_by = \"X\"")
                 .contains("without a date")
         );
+        assert!(
+            wrong("version = \"1\"", "version = \"1\"\napproved_on = 2027-01-31")
+                .contains("nobody who approved it")
+        );
+        assert!(
+            wrong("version = \"1\"", "version = \"1\"\nreview_by = 2027-01-31T10:00:00Z")
+                .contains("not a plain date")
+        );
+        assert!(wrong("[\"cyp3a4\"]", "[\"cyp34a\"]").contains("known are renal"));
+        assert!(
+            wrong("[\"PO\"]", "[\"PQ\"]").starts_with("line 20, column 11: `PQ` is not a route")
+        );
+        assert!(wrong("ATC:S01AE03", "ATC:N05AD01").contains("on the list and left out"));
+        assert!(wrong("ATC:S01AE03", "S01AE03").contains("not a code with its system"));
+        assert!(
+            wrong("substance = \"clarithromycin\"", "substance = \"Haloperidol\"")
+                .contains("means two different things")
+        );
+        assert!(
+            wrong("substance = \"clarithromycin\"", "substance = \"x\"\nnames = [\" \"]")
+                .contains("a name is empty")
+        );
+        assert!(
+            wrong("half_life_h = 20", "half_life_h = 20\nhalf_life_h = 20")
+                .contains("duplicate key")
+        );
+        let nothing = "[list]\nname = \"x\"\nversion = \"1\"\n[evidence]\n";
+        let found = MedicineList::parse(nothing).unwrap_err();
+        assert!(found[0].message.contains("names no medicine"));
     }
 }

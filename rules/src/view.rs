@@ -293,12 +293,13 @@ impl<'a> View<'a> {
         let from = self.patient.stay_from(self.now);
         let first_medicine = self
             .exposures
-            .values()
-            .filter(|exposure| {
+            .iter()
+            .filter(|(index, _)| self.list.medicines().get(**index).is_some_and(|m| !m.indirect))
+            .filter(|(_, exposure)| {
                 exposure.active
                     || exposure.until.zip(from).is_some_and(|(until, from)| until >= from)
             })
-            .map(|exposure| exposure.started)
+            .map(|(_, exposure)| exposure.started)
             .min();
         let before = first_medicine.and_then(|start| {
             let near = |at: At| at <= start && start - at <= self.protocol.baseline_within;
@@ -417,6 +418,11 @@ impl<'a> View<'a> {
             .iter()
             .filter(|(_, exposure)| exposure.active)
             .filter_map(move |(index, exposure)| Some((list.medicines().get(*index)?, exposure)))
+    }
+
+    /// Active listed substances that prolong QT themselves.
+    pub fn prolonging(&self) -> impl Iterator<Item = (&'a Medicine, &Exposure<'a>)> {
+        self.active().filter(|(medicine, _)| !medicine.indirect)
     }
 
     /// Results of an analyte in this stay, specimens up to a moment, oldest first.

@@ -86,7 +86,7 @@ fn of_watch(view: &View<'_>, watch: &Watch) -> Vec<Asked> {
     for (medicine, exposure) in view.active() {
         let all =
             watch.evidence.is_empty() && watch.groups.is_empty() && watch.substances.is_empty();
-        let meant = all
+        let meant = (all && !medicine.indirect)
             || among(&watch.evidence, std::slice::from_ref(&medicine.evidence))
             || among(&watch.groups, &medicine.groups)
             || among(&watch.substances, std::slice::from_ref(&medicine.substance));

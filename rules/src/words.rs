@@ -153,7 +153,12 @@ pub fn medicine(view: &View<'_>, medicine: &Medicine, exposure: &Exposure<'_>) -
     }
     parts.push(format!("since {}", time(view, exposure.started)));
     if let Some(evidence) = view.list.evidence.get(&medicine.evidence) {
-        parts.push(evidence.clone());
+        let detail = &medicine.evidence_detail;
+        parts.push(if detail.is_empty() {
+            evidence.clone()
+        } else {
+            format!("{evidence} ({detail})")
+        });
     }
     parts.join("; ")
 }

@@ -17,7 +17,7 @@ use crate::protocol::condition::{
 use crate::protocol::{LimitBySex, LimitFrom};
 use crate::verdict::{Basis, Because, Missing, Verdict};
 use crate::view::{Exposure, Reading, View, span_h};
-use crate::{kidney, watch, wide, words};
+use crate::{kidney, routes, watch, wide, words};
 use chrono::TimeDelta;
 use std::collections::BTreeSet;
 use toml::Spanned;
@@ -451,9 +451,16 @@ fn printed(view: &View<'_>, reading: &Reading<'_>, by_ms: f64) -> Verdict {
 
 fn medicines(view: &View<'_>, is: &Medicines) -> Verdict {
     let mut because = Because::default();
-    for (medicine, exposure) in
-        view.active().filter(|(medicine, exposure)| asked_for(view, is, medicine, exposure))
-    {
+    let mut maybe = Vec::new();
+    for (medicine, exposure) in view.active() {
+        match asked_for(view, is, medicine, exposure) {
+            Some(true) => {}
+            Some(false) => continue,
+            None => {
+                maybe.push(format!("the route of {} is not known", medicine.substance).into());
+                continue;
+            }
+        }
         let last = exposure.doses.last().map(|dose| dose.at);
         because.rows.push(row(
             "listed medicine",
@@ -464,15 +471,22 @@ fn medicines(view: &View<'_>, is: &Medicines) -> Verdict {
         ));
         because.rests_on.insert(Basis::Medicine(medicine.substance.as_str().into()));
     }
-    if because.rows.len() >= is.at_least { Verdict::Fired(because) } else { Verdict::Quiet }
+    if because.rows.len() >= is.at_least {
+        Verdict::Fired(because)
+    } else if because.rows.len() + maybe.len() >= is.at_least {
+        Verdict::CannotTell(Missing { what: maybe, because, ..Missing::default() })
+    } else {
+        Verdict::Quiet
+    }
 }
 
+/// Whether an active medicine is one of those that are asked for; `None` where that hangs on a route that isn't known.
 fn asked_for(
     view: &View<'_>,
     is: &Medicines,
     medicine: &Medicine,
     exposure: &Exposure<'_>,
-) -> bool {
+) -> Option<bool> {
     let among = |asked: &[Spanned<String>], has: &[String]| {
         asked.is_empty()
             || asked
@@ -483,16 +497,32 @@ fn asked_for(
         view.changes_at(exposure.started + since);
         view.now < exposure.started + since
     };
-    among(&is.evidence, std::slice::from_ref(&medicine.evidence))
+    let named = !(is.evidence.is_empty() && is.groups.is_empty() && is.substances.is_empty());
+    let meant = (named || !medicine.indirect)
+        && among(&is.evidence, std::slice::from_ref(&medicine.evidence))
         && among(&is.groups, &medicine.groups)
         && among(&is.substances, std::slice::from_ref(&medicine.substance))
-        && (is.routes.is_empty()
-            || is
-                .routes
-                .iter()
-                .any(|route| exposure.routes.iter().any(|own| own.eq_ignore_ascii_case(route))))
         && is.started_within_h.is_none_or(|h| still(span_h(h.0)))
-        && is.within_half_lives_of_start.is_none_or(|n| still(view.half_lives(medicine, n.0)))
+        && is.within_half_lives_of_start.is_none_or(|n| still(view.half_lives(medicine, n.0)));
+    if !meant {
+        return Some(false);
+    }
+    let by = |route: &String| {
+        let found = exposure.routes.iter().map(|own| routes::same(own, route));
+        found.max_by_key(|same| match same {
+            Some(true) => 2,
+            None => 1,
+            Some(false) => 0,
+        })
+    };
+    let mut routes = is.routes.iter().map(|route| by(route).flatten());
+    match (is.routes.is_empty(), exposure.routes.is_empty()) {
+        (true, _) => Some(true),
+        (false, true) => None,
+        (false, false) if routes.clone().any(|same| same == Some(true)) => Some(true),
+        (false, false) if routes.any(|same| same.is_none()) => None,
+        (false, false) => Some(false),
+    }
 }
 
 fn exposure(view: &View<'_>) -> Verdict {
@@ -520,7 +550,7 @@ fn exposure(view: &View<'_>) -> Verdict {
 
 fn clearance(view: &View<'_>, below: f64) -> Verdict {
     let renal: Vec<&str> = view
-        .active()
+        .prolonging()
         .filter(|(medicine, _)| medicine.cleared_by.iter().any(|path| path == "renal"))
         .map(|(medicine, _)| medicine.substance.as_str())
         .collect();

@@ -44,7 +44,7 @@ pub fn tisdale_of(view: &View<'_>) -> Score {
             acute_infarction: recorded(Condition::AcuteMyocardialInfarction),
             sepsis: recorded(Condition::Sepsis),
             heart_failure: recorded(Condition::HeartFailure),
-            medicines: Some(view.active().count() - in_group("indirect")),
+            medicines: Some(view.prolonging().count()),
             more_medicines: !all_recognised,
         },
         view.protocol.tisdale,
