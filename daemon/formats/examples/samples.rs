@@ -19,7 +19,7 @@ fn main() -> Result<(), Box<dyn Error>> {
     for (name, bytes) in names.iter().zip(&files) {
         with.add(name, bytes);
     }
-    let site = Site { zone: chrono_tz::UTC, issuer: "test".into() };
+    let site = Site { zone: chrono_tz::UTC, issuer: "test".into(), codes: Default::default() };
     let Content::Tracing(tracing) = read(kind, &bytes, &with, &site)? else {
         return Err("no tracing".into());
     };

@@ -3,7 +3,7 @@
 
 use crate::{BadRow, Chart, Companions, Content, Error, Row, Site, time};
 use chrono::NaiveDate;
-use ebbmark_rules::codes;
+use ebbmark_rules::codes::Meaning;
 use ebbmark_rules::fact::{
     Administration, At, Body, Bound, Code, Condition, Description, Dose, LabResult, MedicineName,
     Order, Place, ResultStatus, ResultValue, Sex, Specimen,
@@ -67,11 +67,6 @@ const RESULTS: &[&str] = &[
     "reported_at",
     "comment",
 ];
-
-/// Words in a comment that say red cells burst, in a few languages; folded to lower case first.
-const HAEMOLYSED: [&str; 4] = ["haemoly", "hemoly", "hämoly", "hemoliz"];
-/// Words that say the specimen is unreliable otherwise.
-const UNRELIABLE: [&str; 4] = ["edta", "contaminat", "clotted", "drip arm"];
 
 #[derive(Debug, Clone, Copy, PartialEq, Eq)]
 enum Sheet {
@@ -206,27 +201,32 @@ pub(crate) fn read(bytes: &[u8], _: &Companions<'_>, site: &Site) -> Result<Cont
             Ok(record) => row(sheet, &Fields { header: &header, record, site }, &place),
         };
         match row {
-            Ok(row) => chart.rows.push(row),
+            Ok(Some(row)) => chart.rows.push(row),
+            Ok(None) => chart.left_out += 1,
             Err(why) => chart.bad.push(BadRow { place: place.into(), why: why.into() }),
         }
     }
     Ok(Content::Chart(chart))
 }
 
-fn row(sheet: Sheet, fields: &Fields<'_>, place: &str) -> Result<Row, String> {
+/// `None`: understood, and of no concern here.
+fn row(sheet: Sheet, fields: &Fields<'_>, place: &str) -> Result<Option<Row>, String> {
     let patient = fields.patient("patient_id")?;
     let (told, body) = match sheet {
         Sheet::Patients => (fields.time("at")?, of_patient(fields)?),
         Sheet::Medicines => of_medicine(fields)?,
-        Sheet::Results => (fields.time("collected_at")?, of_result(fields)?),
+        Sheet::Results => match of_result(fields)? {
+            Some(body) => (fields.time("collected_at")?, body),
+            None => return Ok(None),
+        },
     };
-    Ok(Row {
+    Ok(Some(Row {
         place: place.into(),
         patient,
         occurred_at: told.at,
         assumed_zone: told.assumed_zone,
         body,
-    })
+    }))
 }
 
 fn of_patient(fields: &Fields<'_>) -> Result<Body, String> {
@@ -338,11 +338,20 @@ fn of_medicine(fields: &Fields<'_>) -> Result<(time::Told, Body), String> {
     })
 }
 
-fn of_result(fields: &Fields<'_>) -> Result<Body, String> {
+fn of_result(fields: &Fields<'_>) -> Result<Option<Body>, String> {
     let (system, code) = (fields.get("code_system"), fields.needed("code")?);
-    let analyte = codes::analyte(system, code).ok_or_else(|| {
-        format!("the code `{}` of `{}` is not known", clipped(code), clipped(system))
-    })?;
+    let codes = &fields.site.codes;
+    let analyte = match codes.meaning(system, code) {
+        Some(Meaning::Analyte(analyte)) => analyte,
+        Some(Meaning::LeftOut) => return Ok(None),
+        None => {
+            return Err(format!(
+                "the code `{}` of `{}` is not known",
+                clipped(code),
+                clipped(system)
+            ));
+        }
+    };
     let status = match fields.needed("status")? {
         "P" => ResultStatus::Preliminary,
         "F" => ResultStatus::Final,
@@ -361,17 +370,19 @@ fn of_result(fields: &Fields<'_>) -> Result<Body, String> {
         None => None,
         Some(_) => {
             let number = analyte
-                .convert(fields.number("value")?, fields.get("unit"))
+                .convert(fields.number("value")?, codes.unit(system, code, fields.get("unit")))
                 .map_err(|why| why.to_string())?;
             Some(ResultValue { number, bound })
         }
     };
-    if value.is_none() && matches!(status, ResultStatus::Final | ResultStatus::Corrected) {
+    let specimen = codes.specimen(fields.get("comment"));
+    // A laboratory that could not measure a spoilt specimen says so in the comment alone.
+    let spoilt = specimen != Specimen::default();
+    if value.is_none() && !spoilt && matches!(status, ResultStatus::Final | ResultStatus::Corrected)
+    {
         return Err("column `value` is empty in a result that is said to be final".into());
     }
-    let comment = fields.get("comment").to_lowercase();
-    let says = |words: &[&str]| words.iter().any(|word| comment.contains(word));
-    Ok(Body::Result(LabResult {
+    Ok(Some(Body::Result(LabResult {
         id: ResultId::new(format!("{}/{}", fields.needed("order_id")?, code)),
         analyte,
         value,
@@ -385,8 +396,8 @@ fn of_result(fields: &Fields<'_>) -> Result<Body, String> {
         .into(),
         status,
         issued_at: fields.time_if_any("reported_at")?,
-        specimen: Specimen { haemolysed: says(&HAEMOLYSED), unreliable: says(&UNRELIABLE) },
-    }))
+        specimen,
+    })))
 }
 
 /// What a message may show of a text that a stranger wrote.
@@ -399,7 +410,11 @@ mod tests {
     use super::*;
 
     fn chart(text: &str) -> Chart {
-        let site = Site { zone: chrono_tz::Europe::London, issuer: "SALT".into() };
+        let site = Site {
+            zone: chrono_tz::Europe::London,
+            issuer: "SALT".into(),
+            codes: Default::default(),
+        };
         assert!(looks_like(text.as_bytes()));
         match read(text.as_bytes(), &Companions::default(), &site) {
             Ok(Content::Chart(chart)) => chart,
@@ -414,7 +429,7 @@ mod tests {
         let found = chart(&format!(
             "{RESULT}1,1001,,L1,LN,2823-3,K,3.1,,mmol/L,F,2026-03-10T06:00:00Z,2026-03-10T07:00:00Z,\n\
              2,1001,,L2,LN,2823-3,K,3.1,,,F,2026-03-10T06:00:00Z,,\n\
-             3,1001,,L3,LN,2828-2,K urine,31,,mmol/L,F,2026-03-10T06:00:00Z,,\n\
+             3,1001,,L3,LN,2951-2,Na,31,,mmol/L,F,2026-03-10T06:00:00Z,,\n\
              4,1001,,L4,LN,2823-3,K,31,,mmol/L,F,2026-03-10T06:00:00Z,,\n\
              5,1001,,L5,LN,2601-3,Mg,1.5,,mEq/L,F,2026-03-10T06:00:00Z,,slightly Haemolysed\n"
         ));
@@ -424,13 +439,45 @@ mod tests {
             why[0].0 == "row 3" && why[0].1.contains("unit of potassium is not stated"),
             "{why:?}"
         );
-        assert!(why[1].1.contains("`2828-2` of `LN` is not known"), "{why:?}");
+        assert!(why[1].1.contains("`2951-2` of `LN` is not known"), "{why:?}");
         assert!(why[2].1.contains("outside 1 to 12"), "{why:?}");
         let Body::Result(magnesium) = &found.rows[1].body else { panic!() };
         assert!(
             (magnesium.value.unwrap().number - 0.75).abs() < 1e-12 && magnesium.specimen.haemolysed
         );
         assert_eq!(&*magnesium.as_sent, "1.5 mEq/L");
+    }
+
+    #[test]
+    fn a_sites_own_codes_and_units_are_read_as_it_says() {
+        let own = "[[analyte]]\nsystem = \"LAB\"\ncode = \"K\"\nis = \"potassium\"\nunit = \"mmol/L\"\n\
+                   [[left_out]]\nsystem = \"LAB\"\ncodes = [\"NA\"]\n[units]\n\"MMOL/L\" = \"mmol/L\"\n";
+        let site = Site {
+            zone: chrono_tz::UTC,
+            issuer: "SALT".into(),
+            codes: std::sync::Arc::new(ebbmark_rules::codes::LocalCodes::parse(own).unwrap()),
+        };
+        let text = format!(
+            "{RESULT}1,1001,,L1,LAB,K,K,3.1,,,F,2026-03-10T06:00:00Z,,\n\
+             2,1001,,L2,LAB,NA,Na,140,,,F,2026-03-10T06:00:00Z,,\n\
+             3,1001,,L3,LAB,K,K,4.1,,MMOL/L,F,2026-03-10T07:00:00Z,,\n\
+             4,1001,,L4,LAB,K,K,,,,F,2026-03-10T08:00:00Z,,haemolysed: not reported\n\
+             5,1001,,L5,LAB,CL,Cl,101,,,F,2026-03-10T06:00:00Z,,\n"
+        );
+        let Ok(Content::Chart(chart)) = read(text.as_bytes(), &Companions::default(), &site) else {
+            panic!()
+        };
+        assert_eq!((chart.rows.len(), chart.left_out, chart.bad.len()), (3, 1, 1));
+        let values: Vec<_> = chart
+            .rows
+            .iter()
+            .map(|row| match &row.body {
+                Body::Result(result) => result.value.map(|value| value.number),
+                _ => panic!(),
+            })
+            .collect();
+        assert_eq!(values, [Some(3.1), Some(4.1), None]);
+        assert_eq!(&*chart.bad[0].why, "the code `CL` of `LAB` is not known");
     }
 
     #[test]
@@ -459,7 +506,7 @@ mod tests {
 
     #[test]
     fn a_file_cut_short_is_waited_for_and_an_unknown_column_held() {
-        let site = Site { zone: chrono_tz::UTC, issuer: "SALT".into() };
+        let site = Site { zone: chrono_tz::UTC, issuer: "SALT".into(), codes: Default::default() };
         let short = format!("{RESULT}1,1001,,L1,LN,2823-3,K,3.1");
         assert!(matches!(
             read(short.as_bytes(), &Companions::default(), &site),

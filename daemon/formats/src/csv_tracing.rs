@@ -3,7 +3,7 @@
 
 use crate::{Companions, Content, Error, Site, TracingFile, time};
 use chrono::NaiveDate;
-use ebbmark_measure::{Lead, Recording, Signal};
+use ebbmark_measure::{Recording, Signal};
 use ebbmark_rules::fact::{Description, Printed, Sex};
 use ebbmark_rules::ids::{ContentHash, PatientId};
 use ebbmark_rules::units::Ms;
@@ -82,7 +82,7 @@ pub(crate) fn read(bytes: &[u8], _: &Companions<'_>, site: &Site) -> Result<Cont
             ));
         }
     }
-    let leads = rows(body, head_lines, to_uv, samples)?;
+    let leads = rows(body, head_lines, to_uv, samples, site)?;
     let recording = Recording::new(number("fs_hz")?, leads).map_err(|why| hold(why.to_string()))?;
     let ms = |key: &str| {
         keys.get(key)
@@ -152,7 +152,13 @@ fn head(text: &str) -> Result<Head<'_>, String> {
     Ok((keys, rest, lines))
 }
 
-fn rows(body: &str, head_lines: usize, to_uv: f64, samples: f64) -> Result<Vec<Signal>, Error> {
+fn rows(
+    body: &str,
+    head_lines: usize,
+    to_uv: f64,
+    samples: f64,
+    site: &Site,
+) -> Result<Vec<Signal>, Error> {
     let hold = |why: String| Error::Hold(format!("cannot read the CSV tracing: {why}"));
     let mut lines = body.lines().enumerate().map(|(n, line)| (head_lines + n + 1, line.trim_end()));
     let (_, names) = lines
@@ -163,7 +169,7 @@ fn rows(body: &str, head_lines: usize, to_uv: f64, samples: f64) -> Result<Vec<S
         return Err(hold(format!("{} leads; 64 at most can be read", names.len())));
     }
     let mut leads: Vec<Signal> =
-        names.iter().map(|name| Signal { lead: Lead::named(name), uv: Vec::new() }).collect();
+        names.iter().map(|name| Signal { lead: site.lead(name), uv: Vec::new() }).collect();
     for (number, line) in lines.filter(|(_, line)| !line.is_empty()) {
         let mut fields = line.split(',');
         for signal in &mut leads {
@@ -195,12 +201,13 @@ fn rows(body: &str, head_lines: usize, to_uv: f64, samples: f64) -> Result<Vec<S
 #[cfg(test)]
 mod tests {
     use super::*;
+    use ebbmark_measure::Lead;
 
     const GOOD: &str = "#ecgcsv=1\n#patient_id=1001\n#sex=F\n#birth_date=1950-02-03\n\
                         #start=2026-03-10T02:15:00+01:00\n#fs_hz=500\n#unit=mV\n#lsb=0.001\n#samples=2\nI,ii\n-21,37\n,40\n";
 
     fn site() -> Site {
-        Site { zone: chrono_tz::Europe::London, issuer: "SALT".into() }
+        Site { zone: chrono_tz::Europe::London, issuer: "SALT".into(), codes: Default::default() }
     }
 
     fn parsed(text: &str) -> Result<Content, Error> {

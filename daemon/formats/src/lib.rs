@@ -7,9 +7,11 @@ mod time;
 mod wfdb;
 
 use chrono::{LocalResult, NaiveDateTime, Offset, TimeZone, Utc};
-use ebbmark_measure::Recording;
+use ebbmark_measure::{Lead, Recording};
+use ebbmark_rules::codes::LocalCodes;
 use ebbmark_rules::fact::{At, Body, Description, Printed};
 use ebbmark_rules::ids::{PatientId, TracingId};
+use std::sync::Arc;
 
 /// Settings that reading depends on.
 #[derive(Debug, Clone)]
@@ -18,9 +20,16 @@ pub struct Site {
     pub zone: chrono_tz::Tz,
     /// The issuer of patient numbers that came without one.
     pub issuer: Box<str>,
+    /// The site's own codes, units and words.
+    pub codes: Arc<LocalCodes>,
 }
 
 impl Site {
+    /// A lead by its name, or by what the site's carts call it.
+    pub(crate) fn lead(&self, name: &str) -> Lead {
+        Lead::named(self.codes.lead(name))
+    }
+
     /// A local time as UTC in the site's zone, the zone's name, and a note where the clock change makes it ambiguous
     /// (the earlier is taken) or skips it (read with the offset before the change).
     pub(crate) fn resolve(&self, local: NaiveDateTime) -> (At, Box<str>, Option<&'static str>) {
@@ -155,6 +164,8 @@ pub struct Chart {
     pub rows: Vec<Row>,
     /// Rows that were not.
     pub bad: Vec<BadRow>,
+    /// How many were understood and are of no concern here: a sodium, a potassium in urine.
+    pub left_out: usize,
 }
 
 /// One row, ready to become a fact.

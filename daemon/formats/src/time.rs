@@ -40,7 +40,7 @@ mod tests {
     use super::*;
 
     fn site() -> Site {
-        Site { zone: chrono_tz::Europe::London, issuer: "SALT".into() }
+        Site { zone: chrono_tz::Europe::London, issuer: "SALT".into(), codes: Default::default() }
     }
 
     #[test]

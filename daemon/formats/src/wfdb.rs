@@ -3,7 +3,7 @@
 
 use crate::{Companions, Content, Error, Site, TracingFile};
 use chrono::{NaiveDate, NaiveDateTime, NaiveTime};
-use ebbmark_measure::{Lead, Recording, Signal};
+use ebbmark_measure::{Recording, Signal};
 use ebbmark_rules::fact::{Description, Sex};
 
 /// A header is a few lines; more is something else.
@@ -116,7 +116,7 @@ pub(crate) fn read(header: &[u8], files: &Companions<'_>, site: &Site) -> Result
                     }
                 })
                 .collect();
-            leads.push(Signal { lead: Lead::named(&signal.name), uv });
+            leads.push(Signal { lead: site.lead(&signal.name), uv });
         }
     }
     let calibrated = header.signals.iter().all(|line| line.calibrated);

@@ -1,11 +1,20 @@
 //! A [`Recording`] in, a [`Measurement`] out: where the T wave ebbs back to the baseline, and how far to
 //! believe it. Depends on nothing of ours; does no I/O; owns no clock.
 
-#[allow(dead_code, reason = "the fusion of readers calls it")]
+mod beats;
+mod clean;
+mod engine;
+mod filter;
 mod learned;
 mod measurement;
+mod reading;
 mod recording;
+mod resample;
+mod series;
+mod shape;
 mod units;
+mod verdict;
+mod wave;
 
 pub use measurement::{
     Answer, Beat, BeatKind, ENGINE, Intervals, LeadReading, Marks, Measurement, MedianBeat,
@@ -25,26 +34,36 @@ pub struct Options {
     pub classical_only: bool,
 }
 
-/// For the scripts that train the learned reader, see `examples/training_windows.rs`. Not for measuring.
-#[doc(hidden)]
-pub fn training_windows(leads: &[&[f32]], hz: f32, r: &[usize]) -> Vec<f32> {
-    learned::training_windows(leads, hz, r)
-}
-
 /// Measures one recording. Never fails: what cannot be told is [`Answer::None`] with its reasons.
 pub fn measure(recording: &Recording, options: &Options) -> Measurement {
-    let _ = (recording, options);
-    Measurement {
-        answer: Answer::None(vec![Reason::NoUsableLead]),
-        remarks: Vec::new(),
-        rr: None,
-        rate: None,
-        rhythm: None,
-        intervals: None,
-        qrs: None,
-        paced: false,
-        per_lead: Vec::new(),
-        beats: Vec::new(),
-        median: None,
+    let shipped = if options.classical_only { None } else { learned::Reader::shipped().ok() };
+    engine::measure(recording, options, shipped)
+}
+
+/// For the scripts in `training/`, by way of `examples/training.rs`. Not for measuring.
+#[doc(hidden)]
+pub mod training {
+    use crate::{Measurement, Options, Recording, beats, clean, engine, learned};
+
+    /// What the nets see of every beat: its R peak in seconds, the ms to the next, then for every lead the slow
+    /// track and for every lead the fast one, each beat averaged with up to eight that resemble it.
+    pub fn windows(recording: &Recording) -> Vec<Vec<f32>> {
+        let cleaned = clean::clean(recording, 0, recording.samples());
+        let r = beats::r_peaks(&cleaned.leads);
+        let leads: Vec<&[f32]> = cleaned.leads.iter().map(|lead| lead.uv.as_slice()).collect();
+        learned::training_windows(&leads, clean::HZ as f32, &r)
+    }
+
+    /// Measures with other nets than those that ship, such as those of a fold of cross-validation.
+    ///
+    /// # Errors
+    /// When the text is not a weights file.
+    pub fn measure_with(
+        recording: &Recording,
+        options: &Options,
+        weights: &str,
+    ) -> Result<Measurement, Box<dyn std::error::Error>> {
+        let reader = learned::Reader::parse(weights)?;
+        Ok(engine::measure(recording, options, Some(&reader)))
     }
 }

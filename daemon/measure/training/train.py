@@ -139,8 +139,11 @@ def cross_validate(data, names, split, keep):
     for name in names:
         answers = {}
         for k in range(fold.max() + 1):
-            w = train([d for d, f in zip(data, fold) if f != k], RECIPE[name], SEED + 100 * split + k)
-            (keep / f"{name}-{split}-fold{k}.pickle").write_bytes(pickle.dumps(w))
+            kept = keep / f"{name}-{split}-fold{k}.pickle"  # a run that was stopped goes on where it was
+            if not kept.exists():
+                w = train([d for d, f in zip(data, fold) if f != k], RECIPE[name], SEED + 100 * split + k)
+                kept.write_bytes(pickle.dumps(w))
+            w = pickle.loads(kept.read_bytes())
             for record, f in zip(data, fold):
                 if f == k:
                     answers[record.key] = read_all(w, RECIPE[name], record)

@@ -2,7 +2,7 @@
 //! in force.
 
 use crate::ledger::Ledger;
-use crate::settings::{Folders, Problems};
+use crate::settings::{Codes, Folders, Problems};
 use crate::store::{StoreError, TextKind};
 use ebbmark_rules::finding::Finding;
 use ebbmark_rules::medicines::MedicineList;
@@ -57,12 +57,18 @@ impl Rulebooks {
         Ok(Self { protocol, medicines, examples: results.len(), protocol_text, medicines_text })
     }
 
-    /// Puts in force what is not. The medicine list comes first: a protocol's rules speak of it.
+    /// Puts in force what is not, and keeps the codes by which files are read. The medicine list comes before the
+    /// protocol: its rules speak of it.
     ///
     /// # Errors
     /// The store failed.
-    pub async fn put_in_force(self, ledger: &Ledger) -> Result<(), StoreError> {
+    pub async fn put_in_force(self, ledger: &Ledger, codes: &Codes) -> Result<(), StoreError> {
         let Self { protocol, medicines, protocol_text, medicines_text, .. } = self;
+        if let Some(text) = &codes.text
+            && ledger.put_in_force(TextKind::Codes, text.clone()).await?
+        {
+            tracing::info!("the site's codes came into force");
+        }
         if ledger.put_in_force(TextKind::Medicines, medicines_text).await? {
             tracing::info!(
                 list = medicines.name,

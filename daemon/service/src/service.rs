@@ -131,7 +131,7 @@ impl Service {
         log_fold(&folded);
         match Rulebooks::read(&settings.folders) {
             Ok(books) => {
-                books.put_in_force(&ledger).await?;
+                books.put_in_force(&ledger, &settings.codes).await?;
                 ledger.trouble(Trouble::Settings, false).await?;
             }
             Err(problems) if folded.protocol && folded.medicines => {
@@ -233,8 +233,9 @@ impl Service {
                         "the store's folder changed in the settings; this takes a new start"
                     );
                 }
+                let codes = settings.codes.clone();
                 self.settings.send_replace(Arc::new(settings));
-                books.put_in_force(&self.ledger).await?;
+                books.put_in_force(&self.ledger, &codes).await?;
                 self.ledger.trouble(Trouble::Settings, false).await?;
                 tracing::info!("settings were read again");
                 self.look();

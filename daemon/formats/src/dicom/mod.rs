@@ -37,7 +37,7 @@ pub(crate) fn read(bytes: &[u8], _: &Companions<'_>, site: &Site) -> Result<Cont
         return Err(hold("it is no ECG waveform"));
     }
     let mut warnings = Vec::new();
-    let (hz, leads) = waveform::rhythm(object, &mut warnings)?;
+    let (hz, leads) = waveform::rhythm(object, site, &mut warnings)?;
     let recording = Recording::new(hz, leads).map_err(hold)?;
     let started = acquired(object, site);
     if let Some(note) = started.as_ref().and_then(|told| told.note) {

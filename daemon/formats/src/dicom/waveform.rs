@@ -2,7 +2,7 @@
 //! value = (sample × sensitivity × correction + baseline) in the channel's stated unit.
 
 use super::{code, hold, items, number, text};
-use crate::Error;
+use crate::{Error, Site};
 use dicom_object::{InMemDicomObject, Tag};
 use ebbmark_measure::{Lead, Signal};
 
@@ -64,6 +64,7 @@ impl Sample {
 /// Rate and leads of the original group with the most samples.
 pub(super) fn rhythm(
     object: &InMemDicomObject,
+    site: &Site,
     warnings: &mut Vec<Box<str>>,
 ) -> Result<(f64, Vec<Signal>), Error> {
     let groups = items(object, Tag(0x5400, 0x0100));
@@ -110,7 +111,7 @@ pub(super) fn rhythm(
         .filter(|padding| *padding != 0.0);
     let mut leads = Vec::with_capacity(count);
     for (index, definition) in definitions.iter().enumerate() {
-        let (lead, scale) = channel(definition, warnings)?;
+        let (lead, scale) = channel(definition, site, warnings)?;
         let width = sample.width();
         let uv = data
             .chunks_exact(width * count)
@@ -142,12 +143,13 @@ impl Scale {
 
 fn channel(
     definition: &InMemDicomObject,
+    site: &Site,
     warnings: &mut Vec<Box<str>>,
 ) -> Result<(Lead, Scale), Error> {
     if !items(definition, Tag(0x003a, 0x0209)).is_empty() {
         return Err(hold("a channel is a difference of two electrodes that is no standard lead"));
     }
-    let lead = lead(definition);
+    let lead = lead(definition, site);
     let sensitivity = number(definition, Tag(0x003a, 0x0210));
     let sensitivity = sensitivity
         .filter(|s| *s != 0.0)
@@ -172,7 +174,7 @@ fn channel(
 }
 
 /// The lead by its code, in either scheme; else by its label.
-fn lead(definition: &InMemDicomObject) -> Lead {
+fn lead(definition: &InMemDicomObject, site: &Site) -> Lead {
     let coded = code(definition, Tag(0x003a, 0x0208)).and_then(|(scheme, code)| {
         let number = match scheme.as_str() {
             "SCPECG" => code.strip_prefix("5.6.3-9-"),
@@ -199,6 +201,6 @@ fn lead(definition: &InMemDicomObject) -> Lead {
         let source = items(definition, Tag(0x003a, 0x0208)).first();
         let meaning = source.and_then(|item| text(item, Tag(0x0008, 0x0104)));
         let label = text(definition, Tag(0x003a, 0x0203)).filter(|label| !label.is_empty());
-        Lead::named(&label.or(meaning).unwrap_or_else(|| "unnamed".into()))
+        site.lead(&label.or(meaning).unwrap_or_else(|| "unnamed".into()))
     })
 }

@@ -13,7 +13,7 @@
 )]
 
 /// What an average spans, ms before and after the R peak.
-const BEFORE: f32 = 300.0;
+pub(crate) const BEFORE: f32 = 300.0;
 const AFTER: f32 = 1100.0;
 /// Where it is put to zero, ms before the R peak: the PR segment.
 const ZERO: (f32, f32) = (100.0, 40.0);
@@ -22,9 +22,13 @@ const MARGIN: f32 = 40.0;
 /// Least correlation of two beats that are averaged, from R - 60 ms to 80 ms before the next R.
 const ALIKE: f32 = 0.9;
 /// How far the lengths of two beats that are averaged may differ, as a share.
-pub(super) const SAME_LENGTH: f32 = 0.13;
+const SAME_LENGTH: f32 = 0.13;
 /// The same where the rhythm is so irregular that hardly two beats would be averaged.
-pub(super) const LENGTH_OF_IRREGULAR: f32 = 0.35;
+const LENGTH_OF_IRREGULAR: f32 = 0.35;
+/// Beats are grouped within stretches of this many, so that a slow change of shape is followed.
+const STRETCH: usize = 16;
+/// More groups than this in a stretch, and beats of less equal length are averaged together.
+const MANY_GROUPS: usize = 4;
 /// Low-pass limits for the T wave and for the QRS, Hz.
 const LOW_HZ: f32 = 35.0;
 const WIDE_HZ: f32 = 90.0;
@@ -118,9 +122,23 @@ impl Beats<'_> {
         all.get(all.len() / 2).copied().unwrap_or(1000.0)
     }
 
+    /// Every beat of the recording in a group of like beats, each group to be averaged.
+    pub(crate) fn all_groups(&self) -> Vec<Vec<usize>> {
+        let mut all = Vec::new();
+        for from in (0..self.r.len()).step_by(STRETCH) {
+            let to = (from + STRETCH).min(self.r.len());
+            let mut groups = self.groups(from, to, SAME_LENGTH);
+            if groups.len() > MANY_GROUPS {
+                groups = self.groups(from, to, LENGTH_OF_IRREGULAR);
+            }
+            all.extend(groups);
+        }
+        all
+    }
+
     /// Sorts beats `from..to` into groups that may be averaged, largest first: alike in shape, and in length
     /// within the given share.
-    pub(crate) fn groups(&self, from: usize, to: usize, length: f32) -> Vec<Vec<usize>> {
+    fn groups(&self, from: usize, to: usize, length: f32) -> Vec<Vec<usize>> {
         let n = to.saturating_sub(from);
         let shapes: Vec<Shape> = (from..to).map(|i| self.shape(i)).collect();
         let alike: Vec<Vec<usize>> = (0..n)

@@ -16,7 +16,7 @@ mod weights;
 #[cfg(test)]
 mod parity;
 
-pub(crate) use average::{Average, Beats};
+pub(crate) use average::{Average, BEFORE, Beats, Track};
 pub(crate) use posterior::Posterior;
 
 use features::{CHANNELS, QRS_GRID, T_GRID};
@@ -31,25 +31,9 @@ pub(crate) struct Reader {
     qrs: Vec<Net>,
 }
 
-/// What the nets say of a recording's beats.
-#[derive(Debug, Clone)]
-pub(crate) struct Readings {
-    readings: Vec<Reading>,
-    of_beat: Vec<usize>,
-}
-
-impl Readings {
-    /// The reading of a beat: that of the group of like beats it was averaged in.
-    pub(crate) fn of(&self, beat: usize) -> Option<&Reading> {
-        self.of_beat.get(beat).and_then(|&i| self.readings.get(i))
-    }
-}
-
 /// Marks of one averaged beat, each with its doubt, in ms after the R peak.
 #[derive(Debug, Clone)]
 pub(crate) struct Reading {
-    /// How many beats were averaged.
-    pub(crate) beats: usize,
     /// For all leads together: QRS onset and T end by the second most outlying lead, as the experts'
     /// consensus is defined; with one or two leads, as one reader marks both.
     pub(crate) global: Triple,
@@ -67,10 +51,6 @@ pub(crate) struct Triple {
 
 /// Up to this many leads, each is also read as if it were the only one.
 const FEW_LEADS: usize = 3;
-/// Beats are grouped within stretches of this many, so that a slow change of shape is followed.
-const STRETCH: usize = 16;
-/// More groups than this in a stretch, and beats of less equal length are averaged together.
-const MANY_GROUPS: usize = 4;
 /// The quantile of the T end's probability that has no bias against the experts' consensus over many leads:
 /// the second latest of many marks lies in the later half of what the leads show.
 const CONSENSUS: f32 = 0.6;
@@ -110,7 +90,8 @@ impl Reader {
         READER.get_or_init(|| Reader::parse(include_str!("weights.txt"))).as_ref()
     }
 
-    fn parse(text: &str) -> Result<Self, NotWeights> {
+    /// Reads a weights file.
+    pub(crate) fn parse(text: &str) -> Result<Self, NotWeights> {
         let nets = weights::parse(text)?;
         let named = |start: &str, outputs: usize| {
             nets.iter()
@@ -130,31 +111,8 @@ impl Reader {
         Ok(reader)
     }
 
-    /// Reads every beat of a recording, like beats together: one averaged beat for each group.
-    pub(crate) fn read_beats(&self, beats: &Beats<'_>) -> Readings {
-        let total = beats.r.len();
-        let mut readings = Vec::new();
-        let mut of_beat = vec![usize::MAX; total];
-        for from in (0..total).step_by(STRETCH) {
-            let to = (from + STRETCH).min(total);
-            let mut groups = beats.groups(from, to, average::SAME_LENGTH);
-            if groups.len() > MANY_GROUPS {
-                groups = beats.groups(from, to, average::LENGTH_OF_IRREGULAR);
-            }
-            for group in groups {
-                for &beat in &group {
-                    if let Some(place) = of_beat.get_mut(beat) {
-                        *place = readings.len();
-                    }
-                }
-                readings.push(self.read(&beats.average(&group), group.len()));
-            }
-        }
-        Readings { readings, of_beat }
-    }
-
-    /// Reads an average of so many beats.
-    pub(crate) fn read(&self, average: &Average, beats: usize) -> Reading {
+    /// Reads an average of like beats.
+    pub(crate) fn read(&self, average: &Average) -> Reading {
         let qrs_inputs = features::for_qrs(average);
         let qrs: Vec<Logits> = self.qrs.iter().map(|net| net.forward(&qrs_inputs)).collect();
         let on_and_off = |pick: &dyn Fn(&Logits) -> &Vec<f32>| {
@@ -169,7 +127,6 @@ impl Reader {
         let (together, each) = self.t_ends(average);
         let triple = |[qrs_on, qrs_off]: [Posterior; 2], t_end| Triple { qrs_on, qrs_off, t_end };
         Reading {
-            beats,
             global: triple(on_and_off(&|logits| &logits.global), together),
             leads: each
                 .into_iter()
@@ -207,17 +164,18 @@ impl Reader {
     }
 }
 
-/// What training sees of each beat: its length in ms, then the low and the wide track of every lead, each beat
-/// averaged with up to eight that resemble it.
-pub(crate) fn training_windows(leads: &[&[f32]], hz: f32, r: &[usize]) -> Vec<f32> {
+/// What training sees of each beat: its R peak in seconds, its length in ms, then the low and the wide track of
+/// every lead, each beat averaged with up to eight that resemble it.
+pub(crate) fn training_windows(leads: &[&[f32]], hz: f32, r: &[usize]) -> Vec<Vec<f32>> {
     let beats = Beats { leads, hz, r };
-    let mut out = Vec::new();
-    for beat in 0..r.len() {
-        let average = beats.average(&beats.neighbours(beat, 15, 8));
-        out.push(beats.rr_ms(beat));
-        for track in average.low.iter().chain(&average.wide) {
-            out.extend_from_slice(&track.uv);
-        }
-    }
-    out
+    (0..r.len())
+        .map(|beat| {
+            let average = beats.average(&beats.neighbours(beat, 15, 8));
+            let mut out = vec![r[beat] as f32 / hz, beats.rr_ms(beat)];
+            for track in average.low.iter().chain(&average.wide) {
+                out.extend_from_slice(&track.uv);
+            }
+            out
+        })
+        .collect()
 }

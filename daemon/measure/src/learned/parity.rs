@@ -34,7 +34,7 @@ fn inputs_and_answers_are_those_of_the_training_scripts() -> Result<(), NotWeigh
     assert!(furthest(&features::for_t(&average)[0], &stored["t_input_0"][0]) < 2e-4);
     assert!(furthest(&features::for_qrs(&average)[0], &stored["qrs_input_0"][0]) < 2e-4);
     let reader = Reader::shipped().map_err(Clone::clone)?;
-    let reading = reader.read(&average, 1);
+    let reading = reader.read(&average);
     let same = |ours: &Posterior, name: &str| {
         let apart = furthest(ours.probabilities(), &stored[name][0]);
         assert!(apart < 1e-3, "{name}: {apart}");

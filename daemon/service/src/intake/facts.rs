@@ -73,8 +73,8 @@ pub(super) fn tracing(
 
 /// Chart rows as facts. A file of which no row can be used is held; else its bad rows are reported beside the good.
 pub(super) fn chart(chart: Chart, hash: &ContentHash) -> Reading {
-    let Chart { rows, bad } = chart;
-    if rows.is_empty() {
+    let Chart { rows, bad, left_out } = chart;
+    if rows.is_empty() && left_out == 0 {
         let reason = match bad.first() {
             Some(first) => format!(
                 "none of its {} rows can be used; {}: {}",

@@ -2,7 +2,8 @@
 
 use super::raw::{self, Raw};
 use super::{
-    Folders, Intake, Mail, MailBy, Problems, Secret, Settings, SignIn, Site, Smtp, Tls, Words,
+    Codes, Folders, Intake, Mail, MailBy, Problems, Secret, Settings, SignIn, Site, Smtp, Tls,
+    Words,
 };
 use ebbmark_rules::finding::Finding;
 use std::ops::RangeInclusive;
@@ -82,7 +83,8 @@ impl Check<'_> {
         let folders = self.folders(&raw.folders);
         let intake = self.intake(&raw.intake);
         let mail = self.mail(&raw.mail);
-        let settings = Settings { site: site?, folders: folders?, intake, mail: mail? };
+        let codes = Codes::default();
+        let settings = Settings { site: site?, folders: folders?, intake, mail: mail?, codes };
         let (export, store) = (&settings.folders.export, &settings.folders.store);
         if export.starts_with(store) || store.starts_with(export) {
             self.wrong_hint(
@@ -148,6 +150,10 @@ impl Check<'_> {
         let store = self.path(&raw.store, "store");
         let protocol = self.path(&raw.protocol, "protocol");
         let medicines = self.path(&raw.medicines, "medicines");
+        let codes = match &raw.codes {
+            Some(value) => Some(self.path(value, "codes")?),
+            None => None,
+        };
         let marker = match &raw.marker {
             Some(value) => {
                 let name = self.filled(value, "marker")?;
@@ -167,6 +173,7 @@ impl Check<'_> {
             store: store?,
             protocol: protocol?,
             medicines: medicines?,
+            codes,
             marker,
             least_free,
         })

@@ -7,8 +7,10 @@ mod raw;
 pub use problems::Problems;
 
 use chrono_tz::Tz;
+use ebbmark_rules::codes::LocalCodes;
 use std::fmt;
 use std::path::{Path, PathBuf};
+use std::sync::Arc;
 use std::time::Duration;
 
 /// Checked settings.
@@ -22,6 +24,26 @@ pub struct Settings {
     pub intake: Intake,
     /// How people are told.
     pub mail: Mail,
+    /// The site's own codes.
+    pub codes: Codes,
+}
+
+/// The site's own codes, units and words: a file of their own, read with the settings.
+#[derive(Debug, Clone, PartialEq, Default)]
+pub struct Codes {
+    /// The file's text, to be kept beside what was read by it; `None` where the settings name no file.
+    pub text: Option<String>,
+    /// What it says.
+    pub codes: Arc<LocalCodes>,
+}
+
+impl Codes {
+    fn read(file: &Path) -> Result<Self, Problems> {
+        let text = std::fs::read_to_string(file)
+            .map_err(|error| Problems::whole(file, format!("can't be read: {error}")))?;
+        let codes = LocalCodes::parse(&text).map_err(|found| Problems::of(file, &found))?;
+        Ok(Self { text: Some(text), codes: Arc::new(codes) })
+    }
 }
 
 /// Who and where this is.
@@ -46,6 +68,8 @@ pub struct Folders {
     pub protocol: PathBuf,
     /// The medicine list.
     pub medicines: PathBuf,
+    /// The site's own codes; only what is built in holds where there is none.
+    pub codes: Option<PathBuf>,
     /// A file that has to be in the export folder: without it the folder is taken for an unmounted one.
     pub marker: Option<PathBuf>,
     /// Below this much free space the disk is in trouble, bytes.
@@ -171,7 +195,7 @@ impl fmt::Debug for Secret {
 }
 
 impl Settings {
-    /// Reads and checks a settings file. Relative paths in it count from the file's own folder.
+    /// Reads and checks a settings file and the codes that it names. Relative paths count from the file's own folder.
     ///
     /// # Errors
     /// Everything that is wrong, each with line and column.
@@ -184,12 +208,20 @@ impl Settings {
                 ),
             )
         })?;
-        check::check(file, &text)
+        let mut settings = check::check(file, &text)?;
+        if let Some(file) = &settings.folders.codes {
+            settings.codes = Codes::read(file)?;
+        }
+        Ok(settings)
     }
 
     /// What reading files depends on.
     pub fn reading_site(&self) -> ebbmark_formats::Site {
-        ebbmark_formats::Site { zone: self.site.zone, issuer: self.site.issuer.as_str().into() }
+        ebbmark_formats::Site {
+            zone: self.site.zone,
+            issuer: self.site.issuer.as_str().into(),
+            codes: Arc::clone(&self.codes.codes),
+        }
     }
 
     /// The part of the sender's address after the `@`: the domain of message ids.

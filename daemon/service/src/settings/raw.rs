@@ -28,6 +28,7 @@ pub(super) struct Folders {
     pub(super) store: Spanned<String>,
     pub(super) protocol: Spanned<String>,
     pub(super) medicines: Spanned<String>,
+    pub(super) codes: Option<Spanned<String>>,
     pub(super) marker: Option<Spanned<String>>,
     pub(super) least_free_mib: Option<Spanned<u64>>,
 }

@@ -64,7 +64,7 @@ impl Measure {
             classical_only: self.classical,
         };
         // Patient numbers are never printed here, so whose they are doesn't matter.
-        let site = Site { zone: self.zone, issuer: "".into() };
+        let site = Site { zone: self.zone, issuer: "".into(), codes: Default::default() };
         let mut ended = Ended::Done;
         if !self.json && !say(&table::head()) {
             return ended;
