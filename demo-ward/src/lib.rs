@@ -4,6 +4,7 @@
 //! any person or illness.
 
 mod random;
+pub mod story;
 pub mod synth;
 pub mod write;
 

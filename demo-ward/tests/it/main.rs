@@ -9,4 +9,5 @@
     reason = "a test that fails should say where"
 )]
 
+mod story;
 mod synth;
