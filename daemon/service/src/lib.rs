@@ -4,6 +4,7 @@ pub mod agree;
 pub mod clock;
 pub mod commands;
 pub mod delivery;
+pub mod demo;
 pub mod draw;
 pub mod intake;
 pub mod ledger;

@@ -237,7 +237,7 @@ impl Teller {
         let mut charts = Charts::new(&person.number, &self.ward.issuer);
         let mut later = Vec::new();
         let is = match &event.happens {
-            Happens::Admitted(_) => {
+            Happens::Admitted(true) => {
                 charts.patient(&[
                     ("event", "describe"),
                     ("at", &time(at)),
@@ -254,9 +254,12 @@ impl Teller {
                 ]);
                 Is::Rows(charts)
             }
-            Happens::Discharged(_) => {
+            Happens::Discharged(true) => {
                 charts.patient(&[("event", "discharge"), ("at", &time(at))]);
                 Is::Rows(charts)
+            }
+            Happens::Admitted(false) | Happens::Discharged(false) => {
+                return Err(format!("at {}: only `true` says something", event.at));
             }
             Happens::Risk(condition) => {
                 charts.patient(&[

@@ -27,6 +27,7 @@ struct Arguments {
 #[derive(Debug, Subcommand)]
 enum Command {
     Watch(watch::Watch),
+    Demo(crate::demo::Demo),
     Measure(measure::Measure),
     Check(check::Check),
     Alerts(alerts::Alerts),
@@ -69,6 +70,7 @@ pub fn run() -> ExitCode {
     };
     match arguments.command {
         Command::Watch(watch) => watch.run(),
+        Command::Demo(demo) => demo.run(),
         Command::Measure(measure) => measure.run(),
         Command::Check(check) => check.run(),
         Command::Alerts(alerts) => alerts.run(),
@@ -86,7 +88,7 @@ fn broken(error: &dyn std::error::Error) -> Ended {
 }
 
 /// Writes to standard output; `false` once nobody reads it any more, which ends a command quietly.
-fn say(text: &str) -> bool {
+pub(crate) fn say(text: &str) -> bool {
     use std::io::Write;
     let mut out = std::io::stdout().lock();
     out.write_all(text.as_bytes()).and_then(|()| out.flush()).is_ok()
