@@ -129,6 +129,10 @@ fn why(view: &View<'_>) -> Vec<Box<str>> {
         }
         if view.is_wide(reading) {
             add("QRS is wide or paced: QT holds depolarisation too, so QTc is an estimate".into());
+            let estimates = words::wide(view, reading);
+            if !estimates.is_empty() {
+                add(format!("estimates without depolarisation, from small studies: {estimates}"));
+            }
         }
         if reading.recorded.tracing.rhythm == Some(crate::fact::Rhythm::IrregularlyIrregular) {
             add("RR is irregularly irregular: QT is a mean over beats".into());
@@ -176,15 +180,18 @@ fn formulas(view: &View<'_>, limit_ms: Option<f64>) -> Vec<FormulaRow> {
 pub fn electrolytes(view: &View<'_>) -> Vec<Box<str>> {
     let calcium = match view.best_calcium() {
         // With no calcium at all, what is known of total calcium is said.
-        Of::CalciumIonised if view.electrolyte(Of::CalciumIonised).is_none() => {
+        Of::CalciumIonised if view.electrolyte(Of::CalciumIonised).is_some() => Of::CalciumIonised,
+        Of::CalciumIonised | Of::CalciumCorrected | Of::Potassium | Of::Magnesium => {
             Of::CalciumCorrected
         }
-        best => best,
     };
     [Of::Potassium, Of::Magnesium, calcium]
         .into_iter()
         .map(|of| match view.electrolyte(of) {
-            Some(found) => words::electrolyte(view, of_word(of), &found).into(),
+            Some(found) => {
+                let grade = words::ctcae(of, &found);
+                format!("{}{grade}", words::electrolyte(view, of_word(of), &found)).into()
+            }
             None => words::no_electrolyte(view, of).into(),
         })
         .collect()
@@ -277,6 +284,7 @@ pub fn tide(view: &View<'_>) -> Option<Tide> {
 }
 
 /// Lower limits of the deciding formula, wherever they stand in a condition.
+#[allow(clippy::wildcard_enum_match_arm, reason = "every other condition holds no QTc limit")]
 fn shores(view: &View<'_>, condition: &Condition, tier: &str, found: &mut Vec<(f64, TierName)>) {
     match condition {
         Condition::All(of) | Condition::Any(of) => {

@@ -9,6 +9,7 @@ use std::sync::OnceLock;
 
 /// Hashes with a key that lives as long as the process: a log line can be followed within one run, and
 /// means nothing in another.
+#[allow(clippy::cast_possible_truncation, reason = "folded to 24 bits on purpose")]
 fn veil(parts: &[&str]) -> u32 {
     static KEY: OnceLock<RandomState> = OnceLock::new();
     let hash = KEY.get_or_init(RandomState::new).hash_one(parts);

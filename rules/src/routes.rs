@@ -56,7 +56,7 @@ pub fn usual(route: &str) -> Option<&'static str> {
     let is = |known: &&str| folded(known) == route;
     ROUTES
         .iter()
-        .find(|(usual, others)| is(usual) || others.iter().any(|other| is(other)))
+        .find(|(usual, others)| is(usual) || others.iter().any(is))
         .map(|(usual, _)| *usual)
 }
 

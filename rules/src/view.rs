@@ -387,13 +387,13 @@ impl<'a> View<'a> {
         }
         let mut course = course?;
         for piece in &pieces {
-            if let Piece::Order(now) = piece {
-                if now.until.is_none() {
-                    course.orders.push(now.order);
-                    course.note_route(now.order.route.as_deref());
-                    if let Some(end) = now.order.ends {
-                        self.changes_at(end);
-                    }
+            if let Piece::Order(now) = piece
+                && now.until.is_none()
+            {
+                course.orders.push(now.order);
+                course.note_route(now.order.route.as_deref());
+                if let Some(end) = now.order.ends {
+                    self.changes_at(end);
                 }
             }
         }
@@ -553,7 +553,11 @@ impl<'a> View<'a> {
                 let now = self.patient.results(self.now).find(|now| now.result.id == *id)?;
                 Some(format!("{:?} {:?}", now.result.value, now.result.specimen))
             }
-            _ => None,
+            Basis::Dose(_)
+            | Basis::Order(_)
+            | Basis::Medicine(_)
+            | Basis::Due(..)
+            | Basis::Said(_) => None,
         }
     }
 
@@ -564,6 +568,7 @@ impl<'a> View<'a> {
 }
 
 /// So many hours; at most some thirty thousand years, so that no moment runs out of the calendar.
+#[allow(clippy::cast_possible_truncation, reason = "clamped to what a TimeDelta holds")]
 pub(crate) fn span_h(hours: f64) -> TimeDelta {
     TimeDelta::milliseconds((hours * 3_600_000.0).clamp(-1e15, 1e15) as i64)
 }
@@ -621,10 +626,10 @@ impl<'a> Exposure<'a> {
     }
 
     fn note_route(&mut self, route: Option<&'a str>) {
-        if let Some(route) = route.map(str::trim).filter(|route| !route.is_empty()) {
-            if !self.routes.iter().any(|known| known.eq_ignore_ascii_case(route)) {
-                self.routes.push(route);
-            }
+        if let Some(route) = route.map(str::trim).filter(|route| !route.is_empty())
+            && !self.routes.iter().any(|known| known.eq_ignore_ascii_case(route))
+        {
+            self.routes.push(route);
         }
     }
 }

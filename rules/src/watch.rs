@@ -5,7 +5,7 @@ use crate::fact::At;
 use crate::protocol::condition::Of;
 use crate::protocol::{AsksFor, Watch};
 use crate::verdict::{Basis, Because, Verdict};
-use crate::view::View;
+use crate::view::{View, span_h};
 use crate::words;
 use chrono::TimeDelta;
 
@@ -41,7 +41,7 @@ pub(crate) fn overdue(view: &View<'_>, id: &str, by_h: f64) -> Verdict {
     let Some(watch) = view.protocol.watches.iter().find(|watch| watch.id == id) else {
         return Verdict::cannot_tell("the watch is not in the protocol");
     };
-    let by = TimeDelta::milliseconds((by_h * 3_600_000.0) as i64);
+    let by = span_h(by_h);
     let mut because = Because::default();
     for asked in of_watch(view, watch).into_iter().filter(|asked| asked.done.is_none()) {
         let from = asked.overdue_from + by;

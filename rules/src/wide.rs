@@ -2,7 +2,9 @@
 //! estimates, never alone a reason for the highest tier, never a reason to silence a raw QTc of 500 ms. And the QT
 //! nomogram, which holds for narrow QRS only.
 
+use crate::correction::{Formula, Qt};
 use crate::fact::Sex;
+use crate::units::{Ms, PerMinute};
 
 /// QRS from which it is wide, ms.
 pub const WIDE_FROM_MS: f64 = 120.0;
@@ -32,6 +34,36 @@ pub fn yankelson(qtc_ms: f64, qrs_ms: f64, sex: Option<Sex>) -> Option<f64> {
 /// JT·(HR + 100)/518; 112 or more is prolonged (Zhou & Rautaharju 1992). For wide QRS; `None` for narrow.
 pub fn jt_index(qt_ms: f64, qrs_ms: f64, rate_per_min: f64) -> Option<f64> {
     (qrs_ms >= WIDE_FROM_MS).then_some((qt_ms - qrs_ms) * (rate_per_min + 100.0) / 518.0)
+}
+
+/// JT: QT − QRS, from the end of depolarisation. Corrected for rate as QTc − QRS it keeps across a new left bundle-branch
+/// block (Yankelson, same paper: 328.9 to 327.3 ms). `None` for narrow QRS.
+pub fn jtc(qtc_ms: f64, qrs_ms: f64) -> Option<f64> {
+    (qrs_ms >= WIDE_FROM_MS).then_some(qtc_ms - qrs_ms)
+}
+
+/// Every estimate that can be made for a wide QRS, with its name; in ms, but for the JT index. Bogossian and Wang are
+/// corrected by `formula`, and so is the QTc of Yankelson and of JTc. Empty for narrow QRS.
+pub fn estimates(
+    qt: Qt,
+    qrs: Ms,
+    rate: PerMinute,
+    formula: Formula,
+    sex: Option<Sex>,
+) -> Vec<(&'static str, f64)> {
+    let corrected =
+        |qt_ms: f64| Some(formula.correct(Qt(Ms::new(qt_ms).ok()?), rate, sex).ok()?.value.get());
+    let (qt, qrs) = (qt.0.get(), qrs.get());
+    [
+        ("Bogossian", bogossian(qt, qrs).and_then(corrected)),
+        ("Wang", wang(qt, qrs).and_then(corrected)),
+        ("Yankelson", corrected(qt).and_then(|qtc| yankelson(qtc, qrs, sex))),
+        ("JTc", corrected(qt).and_then(|qtc| jtc(qtc, qrs))),
+        ("JT index", jt_index(qt, qrs, rate.get())),
+    ]
+    .into_iter()
+    .filter_map(|(name, value)| Some((name, value?)))
+    .collect()
 }
 
 /// The raw QT, ms, from which the adult overdose nomogram marks risk at a rate (Chan, Isbister et al., QJM 2007;100:609;
@@ -67,6 +99,24 @@ mod tests {
         {
             near(nomogram_ms(hr), line);
         }
+    }
+
+    #[test]
+    fn estimates_are_made_for_wide_qrs_only_and_without_sex_there_are_fewer() {
+        let at = |qrs: f64, sex| {
+            let ms = |value| Ms::new(value).unwrap();
+            let rate = PerMinute::new(70.0).unwrap();
+            estimates(Qt(ms(460.0)), ms(qrs), rate, Formula::Fridericia, sex)
+        };
+        let found = at(150.0, Some(Sex::Male));
+        let names: Vec<_> = found.iter().map(|(name, _)| *name).collect();
+        assert_eq!(names, ["Bogossian", "Wang", "Yankelson", "JTc", "JT index"]);
+        near(Some(found[0].1), 407.7);
+        // QTc by Fridericia is 484.25; less QRS 150, it is 334.25, and with a man's usual 95 it is 429.25 [A].
+        near(Some(found[3].1), 334.25);
+        near(Some(found[2].1), 429.25);
+        assert_eq!(at(150.0, None).len(), 4);
+        assert!(at(119.9, Some(Sex::Male)).is_empty());
     }
 
     #[test]

@@ -1,6 +1,7 @@
 //! Sentences and parts of sentences that messages share, so that mail, page and report say a thing the same way.
 
 use crate::correction::Formula;
+use crate::electrolytes::low_grade;
 use crate::evaluate::of_word;
 use crate::fact::{At, Bound, Condition, Dose, Source};
 use crate::medicines::Medicine;
@@ -87,6 +88,36 @@ pub fn electrolyte(view: &View<'_>, name: &str, found: &Electrolyte) -> String {
     }
     text.push_str(specimen(found));
     text
+}
+
+/// The CTCAE v5 grade of a trusted low value, from where grades have limits of their own; those below depend on the
+/// laboratory's lower normal limit, which no result carries.
+pub fn ctcae(of: Of, found: &Electrolyte) -> String {
+    let lowest_own = match of {
+        Of::Potassium => 3.0,
+        Of::Magnesium => 0.5,
+        Of::CalciumCorrected => 2.0,
+        Of::CalciumIonised => 1.0,
+    };
+    let exact = found.trusted().filter(|value| value.bound == Bound::Equal && !found.stale);
+    match exact.and_then(|value| low_grade(of.analyte(), value.number, lowest_own)) {
+        Some(grade) => format!(", CTCAE v5 grade {}", grade.0),
+        None => String::new(),
+    }
+}
+
+/// `Bogossian 408 ms, JT index 102`: the estimates for a wide QRS; empty where none can be made.
+pub fn wide(view: &View<'_>, reading: &Reading<'_>) -> String {
+    let (Some((qt, _)), Some(qrs), Some(rate)) = (reading.qt, reading.qrs, reading.rate) else {
+        return String::new();
+    };
+    let formula = view.protocol.reading.formula;
+    let unit = |name: &str| if name == "JT index" { "" } else { " ms" };
+    crate::wide::estimates(qt, qrs, rate, formula, view.sex())
+        .into_iter()
+        .map(|(name, value)| format!("{name} {value:.0}{}", unit(name)))
+        .collect::<Vec<_>>()
+        .join(", ")
 }
 
 /// What is to be said of the specimen.

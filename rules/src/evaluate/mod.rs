@@ -562,7 +562,10 @@ fn clearance(view: &View<'_>, below: f64) -> Verdict {
     let (Some((creatinine, at, id)), Some(age), Some(weight), Some(sex)) =
         (view.creatinine(), view.patient.age(view.now), described.weight, sex)
     else {
-        return Verdict::cannot_tell("creatinine clearance needs creatinine, age, weight and sex");
+        return Verdict::cannot_tell(format!(
+            "creatinine clearance needs creatinine, age, weight and sex{}",
+            filtration(view)
+        ));
     };
     match kidney::cockcroft_gault(age, weight.get(), creatinine, sex) {
         Some(ml) => yes(
@@ -584,6 +587,22 @@ fn clearance(view: &View<'_>, below: f64) -> Verdict {
         ),
         None => Verdict::cannot_tell("creatinine clearance could not be worked out"),
     }
+}
+
+/// What can be said of the kidney without a weight.
+fn filtration(view: &View<'_>) -> String {
+    let sex = view.sex().filter(|sex| *sex != Sex::Other);
+    let (Some((creatinine, at, _)), Some(age), Some(sex)) =
+        (view.creatinine(), view.patient.age(view.now), sex)
+    else {
+        return String::new();
+    };
+    kidney::ckd_epi(age, creatinine, sex).map_or(String::new(), |ml| {
+        format!(
+            "; the filtration by CKD-EPI 2021 is {ml:.0} mL/min/1.73 m² ({})",
+            words::ago(view, at)
+        )
+    })
 }
 
 fn risk(view: &View<'_>, is: &RiskIs) -> Verdict {

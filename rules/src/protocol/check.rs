@@ -6,6 +6,8 @@ use super::file::{File, QuietIs, RosterRow, RuleIs, TierIs, WatchIs};
 use super::{Protocol, ReadingRule, RosterEntry, Rule, TechnicalTier, Tier, Watch, within};
 use crate::finding::Finding;
 use crate::ids::{ContentHash, Private, Role, RuleId, TierName, Ward};
+use crate::routes;
+use crate::view::span_h;
 use chrono::{NaiveDate, NaiveTime, TimeDelta};
 use std::collections::BTreeSet;
 use toml::Spanned;
@@ -473,6 +475,7 @@ impl Check<'_> {
         (name.as_ref() != "shown").then(|| self.tier(tiers, name))
     }
 
+    #[allow(clippy::wildcard_enum_match_arm, reason = "the others can't be written wrongly")]
     fn condition(&mut self, names: &Names<'_>, at: usize, condition: &Condition) {
         match condition {
             Condition::All(of) | Condition::Any(of) | Condition::None(of) => {
@@ -537,6 +540,12 @@ impl Check<'_> {
             Condition::Medicines(medicines) if medicines.at_least == 0 => {
                 self.add(at, "at least 0 medicines is always so", "write 1 or more");
             }
+            Condition::Medicines(medicines) => {
+                for route in medicines.routes.iter().filter(|r| routes::usual(r).is_none()) {
+                    let hint = format!("known are {}", routes::usual_ones());
+                    self.add(at, format!("`{route}` is not a route that is known"), hint);
+                }
+            }
             _ => {}
         }
     }
@@ -579,5 +588,5 @@ impl Check<'_> {
 }
 
 fn minutes(number: f64) -> TimeDelta {
-    TimeDelta::milliseconds((number * 60_000.0).round().clamp(0.0, 1e15) as i64)
+    span_h(number.max(0.0) / 60.0)
 }

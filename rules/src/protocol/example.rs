@@ -11,7 +11,7 @@ use crate::medicines::MedicineList;
 use crate::patient::Patient;
 use crate::units::{Kg, Ms, PerMinute};
 use crate::verdict::Verdict;
-use crate::view::View;
+use crate::view::{View, span_h};
 use chrono::{Datelike, NaiveDate, TimeDelta};
 
 /// What came of one example.
@@ -97,7 +97,7 @@ fn moment() -> At {
 pub(crate) fn facts(example: &ExamplePatient, now: At) -> Vec<Fact> {
     let mut found = Vec::new();
     let mut add = |hours_ago: f64, body: Body| {
-        let at = now - TimeDelta::milliseconds((hours_ago * 3_600_000.0) as i64);
+        let at = now - span_h(hours_ago);
         found.push(Fact {
             occurred_at: at,
             received_at: at,

@@ -88,6 +88,7 @@ pub(super) fn strangers(text: &str, protocol: &Protocol, list: &MedicineList) ->
     found
 }
 
+#[allow(clippy::wildcard_enum_match_arm, reason = "the others name no medicine")]
 fn medicines<'c>(condition: &'c Condition, found: &mut Vec<&'c Medicines>) {
     match condition {
         Condition::All(of) | Condition::Any(of) | Condition::None(of) => {
