@@ -47,6 +47,7 @@ pub mod training {
 
     /// What the nets see of every beat: its R peak in seconds, the ms to the next, then for every lead the slow
     /// track and for every lead the fast one, each beat averaged with up to eight that resemble it.
+    #[allow(clippy::cast_possible_truncation, reason = "the working rate is a small whole number")]
     pub fn windows(recording: &Recording) -> Vec<Vec<f32>> {
         let cleaned = clean::clean(recording, 0, recording.samples());
         let r = beats::r_peaks(&cleaned.leads);
