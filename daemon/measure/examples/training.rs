@@ -8,6 +8,11 @@
 //! Standard input, little-endian: leads `u32`, samples `u32`, rate in Hz `f32`, then the leads one after another,
 //! `f32` µV. Twelve leads are the standard ones; others are named by number.
 
+#![allow(
+    clippy::disallowed_methods,
+    reason = "a program for development that reads a weights file; the crate itself does no I/O"
+)]
+
 use ebbmark_measure::{
     Lead, Marks, Measurement, Options, Recording, Seconds, Signal, measure, training,
 };
