@@ -23,16 +23,19 @@ pub(crate) struct Verdict {
 /// Below this belief the answer is none; below that it is doubtful. On the development records, cross-validated: see
 /// ACCURACY.md, "How the answers are ordered".
 const NONE_BELOW: f64 = 0.30;
-const DOUBTFUL_BELOW: f64 = 0.62;
+const DOUBTFUL_BELOW: f64 = 0.70;
 /// Readers further apart than this are a reason for a person to look, ms.
 const APART_MS: f64 = 45.0;
+/// With too few leads for a consensus, T ends further apart than this leave open which one counts, ms.
+const LEADS_APART_MS: f64 = 50.0;
+const FEW_LEADS: usize = 3;
 /// A T wave below this on every lead has no end to speak of, µV.
 const FLAT_UV: f64 = 30.0;
 const WIDE_MS: f64 = 120.0;
 /// Rates on which the engine was checked, per minute.
 const RATES: (f64, f64) = (30.0, 180.0);
 /// The doubt never falls below this, ms: the experts' own marks scatter by it (ACCURACY.md).
-const LEAST_DOUBT_MS: f64 = 8.0;
+const LEAST_DOUBT_MS: f64 = 6.0;
 
 impl Verdict {
     /// A value over the beats that count: their median, or their mean where the rhythm has no pattern, because there QT
@@ -108,6 +111,10 @@ pub(crate) fn judge(read: &Read) -> Verdict {
     if let Some(apart) = apart.filter(|apart| *apart > APART_MS) {
         doubts.extend(Ms::new(apart).map(Reason::ReadersDisagree));
     }
+    let spread = value(&|group| spread(group)).filter(|_| read.used.len() <= FEW_LEADS);
+    if let Some(spread) = spread.filter(|spread| *spread > LEADS_APART_MS) {
+        doubts.extend(Ms::new(spread).map(Reason::LeadsDisagree));
+    }
     if read.paced {
         doubts.push(Reason::Paced);
     }
@@ -140,6 +147,12 @@ pub(crate) fn judge(read: &Read) -> Verdict {
     verdict
 }
 
+/// From the first lead's T end to the last one's, ms.
+fn spread(group: &GroupRead) -> Option<f32> {
+    let ends = || group.leads.iter().filter_map(|lead| lead.t_end);
+    Some(ends().reduce(f32::max)? - ends().reduce(f32::min)?)
+}
+
 /// Median absolute deviation of the groups' QT, ms, scaled to a normal's SD.
 fn scatter(read: &Read, qt: Option<f64>) -> f64 {
     let Some(qt) = qt else { return 0.0 };
@@ -158,8 +171,8 @@ fn scatter(read: &Read, qt: Option<f64>) -> f64 {
 /// The doubt of QT: what the learned reader's belief spreads over, how far the classical reader is away, and how the
 /// beats scatter.
 fn doubt(width: Option<f64>, apart: Option<f64>, scatter: f64, mean: bool, counted: usize) -> f64 {
-    const WIDTH: f64 = 0.55;
-    const APART: f64 = 0.25;
+    const WIDTH: f64 = 0.50;
+    const APART: f64 = 0.30;
     let belief = width.unwrap_or(24.0) * WIDTH;
     let disagree = apart.unwrap_or(20.0) * APART;
     let beats = if mean { scatter / (counted.max(1) as f64).sqrt() } else { scatter * 0.5 };
