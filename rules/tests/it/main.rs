@@ -1,3 +1,4 @@
 //! The shipped examples and the decider, from outside.
 
 mod config;
+mod values;
