@@ -172,7 +172,8 @@ impl Service {
 
         let tasks = TaskTracker::new();
         tasks.spawn(deadlines(ledger.clone(), clock.clone(), stop.clone()));
-        tasks.spawn(deliver(ledger.clone(), settings_out.clone(), clock, stop.clone()));
+        tasks.spawn(deliver(ledger.clone(), settings_out.clone(), clock.clone(), stop.clone()));
+        tasks.spawn(say_daily(ledger.clone(), settings_out.clone(), clock, stop.clone()));
         tasks.spawn(look_after(ledger.clone(), settings_out, stop.clone()));
         tasks.close();
         Ok(Service {
@@ -357,6 +358,18 @@ async fn deliver(
 ) {
     if let Err(error) = delivery::run(ledger, settings, clock, stop).await {
         tracing::error!(%error, "delivery stopped");
+    }
+}
+
+/// Posts the daily message, and logs why it ended where it should not have.
+async fn say_daily(
+    ledger: Ledger,
+    settings: watch::Receiver<Arc<Settings>>,
+    clock: Clock,
+    stop: CancellationToken,
+) {
+    if let Err(error) = delivery::daily::run(ledger, settings, clock, stop).await {
+        tracing::error!(%error, "the daily message stopped");
     }
 }
 

@@ -12,6 +12,9 @@ use clap::Args;
 pub(super) struct Audit {
     #[command(flatten)]
     place: Where,
+    /// A head that an earlier daily message carried: is that row still in the chain?
+    #[arg(long, value_name = "HASH")]
+    head: Option<String>,
 }
 
 impl Audit {
@@ -20,16 +23,31 @@ impl Audit {
             Ok(settings) => settings,
             Err(ended) => return ended,
         };
-        match Reader::open(&StorePath::new(&settings.folders.store))
-            .and_then(|reader| reader.audit())
-        {
-            Ok(found) => {
+        let reader = Reader::open(&StorePath::new(&settings.folders.store));
+        let looked = reader.and_then(|reader| {
+            let known = self.head.as_ref().map(|head| reader.audit_row(head)).transpose()?;
+            Ok((reader.audit()?, known))
+        });
+        match looked {
+            Ok((found, known)) => {
                 let verdict = match &found.broken {
                     None => "the chain is whole".to_owned(),
                     Some(what) => format!("the chain is broken: {what}"),
                 };
                 say(&format!("{verdict}\nrows {}\nhead {}\n", found.rows, found.head));
-                if found.broken.is_none() { Ended::Done } else { Ended::Findings }
+                match known {
+                    Some(Some(row)) => {
+                        say(&format!("the head that you gave stands at row {row}\n"));
+                    }
+                    Some(None) => {
+                        say(
+                            "the head that you gave is not in the chain: rows were cut off or changed\n",
+                        );
+                    }
+                    None => {}
+                }
+                let is_whole = found.broken.is_none() && known != Some(None);
+                if is_whole { Ended::Done } else { Ended::Findings }
             }
             Err(error) => broken(&error),
         }

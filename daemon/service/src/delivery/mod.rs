@@ -3,6 +3,7 @@
 //! A message is claimed, which is on the disk before anyone connects; sent on a connection of its own within a
 //! deadline; and settled by what the server said. Only a 250 after the final dot is "sent".
 
+pub mod daily;
 mod mailer;
 mod smtp;
 
@@ -167,7 +168,7 @@ mod tests {
         let message = |attempts| Outgoing {
             id: 1,
             rows: vec![1],
-            alert: AlertId::new("a"),
+            alert: Some(AlertId::new("a")),
             step: 0,
             recipient: Private::new("x@y.example"),
             message_id: "m@y.example".to_owned(),

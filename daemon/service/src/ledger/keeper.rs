@@ -85,6 +85,9 @@ impl Keeper {
                 Command::Settle(rows, sending, reply) => {
                     self.answer(reply, |keeper| keeper.settle(&rows, &sending))
                 }
+                Command::Daily(day, to, reply) => {
+                    self.answer(reply, |keeper| keeper.change(|pen| pen.daily(day, &to)))
+                }
                 Command::Hurry(reply) => self.answer(reply, Keeper::hurry),
                 Command::NextMessage(reply) => {
                     self.answer(reply, |keeper| keeper.store.next_message())
@@ -186,6 +189,7 @@ impl Keeper {
         self.change(|pen| {
             for &row in rows {
                 let (alert, step, recipient) = pen.change.settle(row, sending)?;
+                let Some(alert) = alert else { continue };
                 let body = match sending {
                     Sending::Sent { .. } => Body::Told { alert, step, recipient },
                     Sending::Refused { .. } => Body::Refused { alert, step, recipient },

@@ -15,11 +15,13 @@ pub use fold::Folded;
 
 use crate::clock::Clock;
 use crate::store::outbox::{Outgoing, Sending};
-use crate::store::{Held, Seen, StoreError, StorePath, TextKind, What};
+use crate::store::{Day, Held, Seen, StoreError, StorePath, TextKind, What};
+use chrono::NaiveDate;
 use ebbmark_formats::BadRow;
 use ebbmark_rules::alert::Notice;
 use ebbmark_rules::fact::{At, Body, Description, Source, Trouble};
 use ebbmark_rules::ids::{ContentHash, PatientId, Private};
+use ebbmark_rules::protocol::Protocol;
 use keeper::Keeper;
 use std::sync::Arc;
 use std::thread::JoinHandle;
@@ -110,6 +112,8 @@ pub enum Sheet<'a> {
     Letter(Post<'a>),
     /// About many notices to one person.
     Digest(Envelope<'a>, &'a [Post<'a>]),
+    /// That the service is alive, and how its day was.
+    Daily(Envelope<'a>, &'a Day, Option<&'a Protocol>),
 }
 
 /// What a message that is not about one notice is called, and to whom it goes.
@@ -164,6 +168,7 @@ enum Command {
     Claim(usize, Reply<Vec<Outgoing>>),
     Settle(Vec<i64>, Sending, Reply<()>),
     Hurry(Reply<usize>),
+    Daily(NaiveDate, Vec<Private>, Reply<Tally>),
     NextMessage(Reply<Option<At>>),
 }
 
@@ -283,6 +288,14 @@ impl Ledger {
     /// The message was not claimed, or the ledger has stopped or stops now.
     pub async fn settle(&self, rows: Vec<i64>, sending: Sending) -> Result<(), StoreError> {
         self.ask(|reply| Command::Settle(rows, sending, reply)).await
+    }
+
+    /// Posts the day's message to these recipients, unless it is posted already.
+    ///
+    /// # Errors
+    /// The ledger has stopped or stops now.
+    pub async fn daily(&self, day: NaiveDate, to: Vec<Private>) -> Result<Tally, StoreError> {
+        self.ask(|reply| Command::Daily(day, to, reply)).await
     }
 
     /// Lets every message that waits go now: the server takes mail again. Gives how many.

@@ -3,11 +3,14 @@
 use super::keeper::Shelf;
 use super::known::Known;
 use super::{Arrival, Draft, Envelope, Post, Reading, Render, Sheet, Tally};
-use crate::store::outbox::{Crowd, digest_id, message_id};
-use crate::store::{Held, Outcome, StoreError, Taken, What, Writing};
+use crate::store::outbox::{Crowd, daily_id, digest_id, message_id};
+use crate::store::{Held, Outcome, StoreError, Taken, TextKind, What, Writing};
+use chrono::NaiveDate;
 use ebbmark_rules::alert::{Decision, Notice};
-use ebbmark_rules::decide::Decider;
+use ebbmark_rules::decide::{Decider, Texts};
 use ebbmark_rules::fact::{At, Fact};
+use ebbmark_rules::ids::Private;
+use ebbmark_rules::protocol::Protocol;
 use std::panic::{AssertUnwindSafe, catch_unwind};
 
 /// What writes within one transaction.
@@ -142,5 +145,21 @@ impl Pen<'_, '_> {
                 Ok(())
             }
         }
+    }
+
+    /// The day's message.
+    pub(super) fn daily(&mut self, day: NaiveDate, to: &[Private]) -> Result<(), StoreError> {
+        let figures = self.change.day()?;
+        let text = self.known.in_force(TextKind::Protocol).and_then(|hash| self.shelf.text(hash));
+        let protocol = text.and_then(|text| Protocol::parse(text).ok());
+        for recipient in to {
+            let id = daily_id(day, recipient, self.domain);
+            let envelope = Envelope { recipient, message_id: &id, at: self.now };
+            let bytes = (self.render)(&Sheet::Daily(envelope, &figures, protocol.as_ref()));
+            if self.change.post_daily(recipient, &id, &bytes)? {
+                self.tally.posted += 1;
+            }
+        }
+        Ok(())
     }
 }

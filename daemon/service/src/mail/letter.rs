@@ -114,7 +114,7 @@ impl Desk<'_> {
         if day(at) == day(now) { self.clock(at) } else { self.when(at) }
     }
 
-    fn sign_off(&self) -> Vec<String> {
+    pub(super) fn sign_off(&self) -> Vec<String> {
         let name = (!self.words.sign_off.is_empty()).then(|| self.words.sign_off.clone());
         let hospital = format!("Ebbmark at {}", self.site.name);
         std::iter::once(hospital).chain(name).collect()
@@ -384,7 +384,7 @@ fn is_urgent(notice: &Notice) -> bool {
 }
 
 /// What each message says of itself; of the service's own trouble first what that means.
-fn cautions<'a>(notices: impl IntoIterator<Item = &'a Notice>) -> Vec<String> {
+pub(super) fn cautions<'a>(notices: impl IntoIterator<Item = &'a Notice>) -> Vec<String> {
     let technical = notices.into_iter().any(|notice| notice.alert.patient.is_none());
     let technical = Some(TECHNICAL_CAUTION).filter(|_| technical);
     technical.into_iter().chain(CAUTIONS).map(str::to_owned).collect()

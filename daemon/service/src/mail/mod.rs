@@ -3,6 +3,7 @@
 //! A message is a pure function of the notice, the recipient and the site, so that one made twice is the same message,
 //! to the byte. Nothing in a subject identifies a patient.
 
+mod daily;
 mod figure;
 mod html;
 mod letter;
@@ -50,6 +51,9 @@ impl Press {
                 let domain = message_id.rsplit('@').next().unwrap_or("localhost");
                 let thread = format!("<{}@{domain}>", notice.alert.id);
                 self.message(envelope, Some(thread), &desk.letter(&post))
+            }
+            Sheet::Daily(envelope, day, protocol) => {
+                self.message(envelope, None, &desk.daily(envelope.at, day, protocol))
             }
             Sheet::Digest(envelope, posts) => self.message(envelope, None, &desk.digest(posts)),
         }

@@ -2,10 +2,12 @@
 
 use super::raw::{self, Raw};
 use super::{
-    Codes, Folders, Intake, Mail, MailBy, Problems, Secret, Settings, SignIn, Site, Smtp, Tls,
-    Words,
+    Codes, Daily, Folders, Intake, Mail, MailBy, Problems, Secret, Settings, SignIn, Site, Smtp,
+    Tls, Words,
 };
+use chrono::NaiveTime;
 use ebbmark_rules::finding::Finding;
+use ebbmark_rules::ids::Private;
 use std::ops::RangeInclusive;
 use std::path::{Path, PathBuf};
 use std::time::Duration;
@@ -69,6 +71,12 @@ fn distance(a: &str, b: &str) -> usize {
         }
     }
     row.last().copied().unwrap_or(a.len())
+}
+
+fn is_address(text: &str) -> bool {
+    let whole =
+        text.split_once('@').is_some_and(|(name, domain)| !name.is_empty() && !domain.is_empty());
+    whole && !text.contains(char::is_whitespace)
 }
 
 struct Check<'a> {
@@ -192,10 +200,7 @@ impl Check<'_> {
 
     fn mail(&mut self, raw: &raw::Mail) -> Option<Mail> {
         let from = self.filled(&raw.from, "from")?;
-        let address_is_whole = from
-            .split_once('@')
-            .is_some_and(|(name, domain)| !name.is_empty() && !domain.is_empty());
-        if !address_is_whole || from.contains(char::is_whitespace) {
+        if !is_address(&from) {
             self.wrong_hint(
                 &raw.from,
                 format!("`from` is `{from}`, which is no mail address"),
@@ -232,8 +237,26 @@ impl Check<'_> {
         if let Some(sign_off) = &raw.words.sign_off {
             words.sign_off = sign_off.get_ref().trim().to_owned();
         }
+        let daily = match &raw.daily {
+            Some(daily) => Some(self.daily(daily)?),
+            None => None,
+        };
         let names = raw.names.as_ref().is_some_and(|names| *names.get_ref());
-        Some(Mail { from, names, by, words })
+        Some(Mail { from, names, by, words, daily })
+    }
+
+    fn daily(&mut self, raw: &raw::Daily) -> Option<Daily> {
+        let Ok(at) = NaiveTime::parse_from_str(raw.at.get_ref(), "%H:%M") else {
+            let what = format!("`at` is `{}`; a time like `07:00` is expected", raw.at.get_ref());
+            return self.no(&raw.at, &what);
+        };
+        for to in &raw.to {
+            if !is_address(to.get_ref()) {
+                self.wrong(to, format!("`{}` is no mail address", to.get_ref()));
+            }
+        }
+        let to = raw.to.iter().map(|to| Private::new(to.get_ref().as_str())).collect();
+        Some(Daily { at, to })
     }
 
     fn no<T, U>(&mut self, value: &Spanned<T>, what: &str) -> Option<U> {
@@ -398,6 +421,16 @@ folder = { path = "mail" }
                 "ebbmark@brannock.example",
                 "ebbmark",
                 "line 15, column 8: `from` is `ebbmark`, which is no mail address",
+            ),
+            (
+                "folder = { path = \"mail\" }",
+                "folder = { path = \"mail\" }\ndaily = { at = \"7 am\", to = [] }",
+                "line 17, column 16: `at` is `7 am`; a time like `07:00` is expected",
+            ),
+            (
+                "folder = { path = \"mail\" }",
+                "folder = { path = \"mail\" }\ndaily = { at = \"07:00\", to = [\"keeper\"] }",
+                "line 17, column 31: `keeper` is no mail address",
             ),
             ("[mail]", "[mail", "line 13, column 6: "),
         ];

@@ -6,8 +6,10 @@ mod raw;
 
 pub use problems::Problems;
 
+use chrono::NaiveTime;
 use chrono_tz::Tz;
 use ebbmark_rules::codes::LocalCodes;
+use ebbmark_rules::ids::Private;
 use std::fmt;
 use std::path::{Path, PathBuf};
 use std::sync::Arc;
@@ -102,6 +104,17 @@ pub struct Mail {
     pub by: MailBy,
     /// The hospital's own words.
     pub words: Words,
+    /// Who is told each day that the service is alive, and when.
+    pub daily: Option<Daily>,
+}
+
+/// The daily message.
+#[derive(Debug, Clone, PartialEq, Eq)]
+pub struct Daily {
+    /// At what time of the site's clock.
+    pub at: NaiveTime,
+    /// To whom: addresses.
+    pub to: Vec<Private>,
 }
 
 /// What a hospital says in its own words.

@@ -53,6 +53,14 @@ pub(super) struct Mail {
     pub(super) folder: Option<Spanned<Folder>>,
     #[serde(default)]
     pub(super) words: Words,
+    pub(super) daily: Option<Daily>,
+}
+
+#[derive(Debug, Deserialize)]
+#[serde(deny_unknown_fields)]
+pub(super) struct Daily {
+    pub(super) at: Spanned<String>,
+    pub(super) to: Vec<Spanned<String>>,
 }
 
 #[derive(Debug, Default, Deserialize)]

@@ -3,6 +3,7 @@
 mod audit;
 mod backup;
 mod content;
+mod day;
 pub mod outbox;
 mod read;
 mod schema;
@@ -11,6 +12,7 @@ mod write;
 pub use audit::AuditCheck;
 pub use backup::{Copied, backup};
 pub use content::Contents;
+pub use day::Day;
 pub use read::{AlertRow, FileRow, Reader};
 pub use write::{Held, Outcome, Seen, Stamp, Taken, TextKind, What, Writing};
 

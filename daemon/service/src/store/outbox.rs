@@ -16,6 +16,7 @@
 
 use super::write::Writing;
 use super::{Store, StoreError, audit, micros, moment};
+use chrono::NaiveDate;
 use ebbmark_rules::alert::{Decision, Notice, NoticeReason};
 use ebbmark_rules::fact::At;
 use ebbmark_rules::ids::{AlertId, ContentHash, Private};
@@ -28,8 +29,8 @@ pub struct Outgoing {
     pub id: i64,
     /// All rows that it settles: one, or those of a digest.
     pub rows: Vec<i64>,
-    /// About which alert.
-    pub alert: AlertId,
+    /// About which alert; none for the daily message.
+    pub alert: Option<AlertId>,
     /// About which notice of it.
     pub step: u32,
     /// To whom: an address.
@@ -108,6 +109,12 @@ pub fn message_id(alert: &AlertId, step: u32, recipient: &Private, domain: &str)
     format!("{}@{domain}", hash.as_str().get(..40).unwrap_or_default())
 }
 
+/// A day's message's identity: a function of day and recipient.
+pub fn daily_id(day: NaiveDate, recipient: &Private, domain: &str) -> String {
+    let hash = ContentHash::of(format!("daily\n{day}\n{}", recipient.expose()).as_bytes());
+    format!("{}@{domain}", hash.as_str().get(..40).unwrap_or_default())
+}
+
 /// A digest's identity: a function of the messages in whose place it goes.
 pub fn digest_id(crowd: &Crowd, domain: &str) -> String {
     let ids: Vec<&str> = crowd.messages.iter().map(|message| message.message_id.as_str()).collect();
@@ -163,6 +170,32 @@ impl Writing<'_> {
         audit::append(self.sql(), self.at(), &format!("message {id}"), &text)
     }
 
+    /// Puts a day's message in the outbox; `false` where it is there already.
+    pub fn post_daily(
+        &self,
+        recipient: &Private,
+        message_id: &str,
+        bytes: &[u8],
+    ) -> Result<bool, StoreError> {
+        let now = micros(self.at());
+        let added = self
+            .sql()
+            .prepare_cached(
+                "INSERT INTO outbox (alert, step, recipient, role, asks, message_id, bytes, state, created_us, next_try_us)
+                 VALUES (NULL, 0, ?, '', 0, ?, ?, 'pending', ?, ?) ON CONFLICT (message_id) DO NOTHING",
+            )
+            .and_then(|mut insert| {
+                insert.execute(params![recipient.expose(), message_id, bytes, now, now])
+            })
+            .map_err(StoreError::sql("add a daily message to"))?;
+        if added > 0 {
+            let id = self.sql().last_insert_rowid();
+            let text = format!("pending {}", ContentHash::of(bytes).as_str());
+            audit::append(self.sql(), self.at(), &format!("message {id}"), &text)?;
+        }
+        Ok(added > 0)
+    }
+
     /// Whether a message about this step of this alert was put in the outbox.
     pub fn is_posted(&self, alert: &AlertId, step: u32) -> Result<bool, StoreError> {
         self.sql()
@@ -178,7 +211,7 @@ impl Writing<'_> {
         let recipients = self
             .sql()
             .prepare_cached(
-                "SELECT recipient FROM outbox WHERE state = 'pending' AND next_try_us <= ? AND digest IS NULL
+                "SELECT recipient FROM outbox WHERE state = 'pending' AND next_try_us <= ? AND digest IS NULL AND alert IS NOT NULL
                  GROUP BY recipient HAVING count(*) >= ? ORDER BY recipient",
             )
             .and_then(|mut query| {
@@ -191,7 +224,7 @@ impl Writing<'_> {
             .sql()
             .prepare_cached(
                 "SELECT id, alert, step, message_id FROM outbox
-                 WHERE recipient = ? AND state = 'pending' AND next_try_us <= ? AND digest IS NULL
+                 WHERE recipient = ? AND state = 'pending' AND next_try_us <= ? AND digest IS NULL AND alert IS NOT NULL
                  ORDER BY id LIMIT ?",
             )
             .map_err(read())?;
@@ -271,7 +304,7 @@ impl Writing<'_> {
                 "SELECT min(outbox.id), alert.id, step, recipient, coalesce(digest.message_id, outbox.message_id),
                         coalesce(digest.bytes, outbox.bytes), attempts, coalesce(digest.created_us, outbox.created_us),
                         digest.id
-                 FROM outbox JOIN alert ON alert.id = outbox.alert LEFT JOIN digest ON digest.id = outbox.digest
+                 FROM outbox LEFT JOIN alert ON alert.id = outbox.alert LEFT JOIN digest ON digest.id = outbox.digest
                  WHERE outbox.state IN ('pending', 'waiting') AND next_try_us <= ?
                  GROUP BY coalesce(-digest.id, outbox.id)
                  ORDER BY alert.tier_rank DESC, next_try_us, outbox.id LIMIT ?",
@@ -282,7 +315,7 @@ impl Writing<'_> {
                 let message = Outgoing {
                     id: row.get(0)?,
                     rows: vec![row.get(0)?],
-                    alert: AlertId::new(row.get::<_, String>(1)?),
+                    alert: row.get::<_, Option<String>>(1)?.map(AlertId::new),
                     step: row.get(2)?,
                     recipient: Private::new(row.get::<_, String>(3)?),
                     message_id: row.get(4)?,
@@ -335,7 +368,7 @@ impl Writing<'_> {
         &self,
         id: i64,
         sending: &Sending,
-    ) -> Result<(AlertId, u32, Private), StoreError> {
+    ) -> Result<(Option<AlertId>, u32, Private), StoreError> {
         let (state, settled, next_try, reply) = match sending {
             Sending::Sent { reply } => ("sent", Some(micros(self.at())), None, reply),
             Sending::Refused { reply } => ("refused", Some(micros(self.at())), None, reply),
@@ -350,8 +383,8 @@ impl Writing<'_> {
             .and_then(|mut update| {
                 update
                     .query_row(params![id, state, settled, next_try, reply], |row| {
-                        let (alert, recipient): (String, String) = (row.get(0)?, row.get(2)?);
-                        Ok((AlertId::new(alert), row.get(1)?, Private::new(recipient)))
+                        let (alert, recipient): (Option<String>, String) = (row.get(0)?, row.get(2)?);
+                        Ok((alert.map(AlertId::new), row.get(1)?, Private::new(recipient)))
                     })
                     .optional()
             })
@@ -363,13 +396,14 @@ impl Writing<'_> {
             &format!("message {id}"),
             &format!("{state} {reply}"),
         )?;
-        let answered = self
-            .sql()
-            .prepare_cached("SELECT 1 FROM alert WHERE id = ? AND state <> 'open'")
-            .and_then(|mut query| query.exists([about.0.as_str()]))
-            .map_err(StoreError::sql("settle a message in"))?;
-        if answered {
-            self.moot(&about.0)?;
+        if let Some(alert) = &about.0
+            && self
+                .sql()
+                .prepare_cached("SELECT 1 FROM alert WHERE id = ? AND state <> 'open'")
+                .and_then(|mut query| query.exists([alert.as_str()]))
+                .map_err(StoreError::sql("settle a message in"))?
+        {
+            self.moot(alert)?;
         }
         Ok(about)
     }

@@ -7,7 +7,7 @@ use super::{StoreError, StorePath, moment, resolved};
 use ebbmark_rules::alert::{Alert, Decision};
 use ebbmark_rules::fact::{At, Fact};
 use ebbmark_rules::ids::ContentHash;
-use rusqlite::{Connection, OpenFlags, params};
+use rusqlite::{Connection, OpenFlags, OptionalExtension, params};
 use serde::de::DeserializeOwned;
 use std::collections::BTreeMap;
 use std::path::PathBuf;
@@ -251,6 +251,15 @@ impl Reader {
     /// The hash of the last audit row.
     pub fn audit_head(&self) -> Result<String, StoreError> {
         audit::head(&self.connection)
+    }
+
+    /// The number of the audit row with this hash, if the chain has one.
+    pub fn audit_row(&self, hash: &str) -> Result<Option<u64>, StoreError> {
+        self.connection
+            .prepare("SELECT seq FROM audit WHERE hash = ?")
+            .and_then(|mut query| query.query_row([hash], |row| row.get::<_, i64>(0)).optional())
+            .map(|row| row.map(i64::cast_unsigned))
+            .map_err(StoreError::sql("look an audit row up in"))
     }
 
     /// Checks the whole audit chain against itself and against the rows that it speaks of.

@@ -96,11 +96,11 @@ CREATE TABLE digest (
 CREATE TRIGGER digest_only_grows BEFORE UPDATE ON digest BEGIN SELECT raise(ABORT, 'digests are never changed'); END;
 CREATE TRIGGER digest_keeps BEFORE DELETE ON digest BEGIN SELECT raise(ABORT, 'digests are never deleted'); END;
 
--- One message to one recipient about one step of one alert; its bytes are rendered once. `asks`: it asks for an answer,
+-- One message to one recipient about one step of one alert, or (without an alert) of one day; its bytes are rendered once. `asks`: it asks for an answer,
 -- so that retrying it is pointless once somebody gave one. `digest`: what goes out in its place.
 CREATE TABLE outbox (
     id          INTEGER PRIMARY KEY,
-    alert       TEXT NOT NULL REFERENCES alert (id),
+    alert       TEXT REFERENCES alert (id),
     step        INTEGER NOT NULL,
     recipient   TEXT NOT NULL,
     role        TEXT NOT NULL,
