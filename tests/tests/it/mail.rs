@@ -183,6 +183,44 @@ async fn server_that_went_away_gets_every_message_once_it_is_back() {
     service.stop().await.unwrap();
 }
 
+/// Once a day at the hospital's own time, also over a restart; its audit head is found in the chain again.
+#[tokio::test(flavor = "multi_thread")]
+async fn daily_message_comes_once_a_day_with_the_audit_head() {
+    let hospital = Hospital::new();
+    let office = PostOffice::open(Security::Plain, hospital.path());
+    let daily = format!("[mail.daily]\nat = \"07:00\"\nto = [\"{KEEPER}\"]\n");
+    hospital.mail(&format!("{}{daily}", office.settings()));
+    let early = morning() - TimeDelta::hours(3);
+    let (clock, hand) = Clock::manual(early);
+    let service = hospital.start(clock).await;
+    service.ledger().advance().await.unwrap();
+    assert_eq!(office.taken(), [], "not before its time");
+    hand.set(early + TimeDelta::minutes(61));
+    block_in_place(|| office.wait("the day's message", |taken, _| all_reached(taken, &[KEEPER])));
+    block_in_place(|| hospital.wait_outbox("sent", |outbox| outbox.keys().eq(["sent"])));
+    service.stop().await.unwrap();
+    let (clock, hand) = Clock::manual(early + TimeDelta::hours(2));
+    let service = hospital.start(clock).await;
+    hand.set(early + TimeDelta::hours(26));
+    // Feeds have fallen silent by then, which the same person is told of.
+    let daily = |mail: &&Mail| mail.header("Subject").starts_with("Ebbmark daily: alive, ");
+    block_in_place(|| {
+        office.wait("the next day's", |taken, _| taken.iter().filter(daily).count() > 1);
+    });
+    service.stop().await.unwrap();
+
+    let taken = office.taken();
+    let days: Vec<&Mail> = taken.iter().filter(daily).collect();
+    assert_eq!(days.len(), 2, "one a day");
+    for mail in days {
+        let text = String::from_utf8_lossy(&mail.bytes).replace("=\r\n", "");
+        let head = text.split_once("- Head: ").unwrap().1.get(..64).unwrap();
+        let row = hospital.reader().audit_row(head).unwrap();
+        assert!(row.is_some(), "{head} stands in the chain");
+    }
+    assert_eq!(hospital.reader().audit_row(&"0".repeat(64)).unwrap(), None);
+}
+
 /// The server takes the message and the program dies before it hears so. Nobody can know; the message goes out again,
 /// and is the same one: one row, one Message-ID, the same bytes.
 #[test]

@@ -291,6 +291,31 @@ fn digest_puts_the_most_pressing_first_and_keeps_every_part_whole() {
     assert!(!html.contains("cid:"), "a digest does without pictures");
 }
 
+#[test]
+fn daily_message_carries_figures_and_the_whole_audit_head() {
+    let day = crate::store::Day {
+        raised: vec![("call".to_owned(), 2), ("review".to_owned(), 5)],
+        open: 3,
+        audit_rows: 4711,
+        audit_head: "ab".repeat(32),
+        ..Default::default()
+    };
+    let recipient = Private::new("keeper@saltmere.example");
+    let envelope = Envelope { recipient: &recipient, message_id: "d@x.example", at: at(1) };
+    let bytes = press(false).print(&Sheet::Daily(envelope, &day, None));
+    let message = String::from_utf8(bytes).unwrap();
+    assert!(message.contains("Subject: Ebbmark daily: alive, 3 open"));
+    let (text, html) = bodies(&message);
+    for body in [flat(&text), flat(&words(&html))] {
+        let head = "ab".repeat(32);
+        for part in
+            ["3 alerts wait for an answer.", "2 call, 5 review", "4711", &head, "none in force"]
+        {
+            assert!(body.contains(part), "{part} in {body}");
+        }
+    }
+}
+
 /// Wording and layout as people get them; what they must say is checked above.
 #[test]
 fn wording_is_as_last_read_by_a_person() {
