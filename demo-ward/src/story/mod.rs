@@ -78,7 +78,7 @@ pub enum Act {
         /// What they mean to do, in one of the protocol's intents.
         intent: String,
     },
-    /// A qualified reader reads the patient's latest tracing, globally and to the tangent.
+    /// A qualified reader reads the patient's latest tracing, globally and to where T meets the baseline.
     OverRead {
         /// Whose tracing.
         patient: PatientId,

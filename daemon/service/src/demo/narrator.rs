@@ -155,7 +155,8 @@ fn read(fact: &Fact, tracing: &Tracing) -> String {
     let (Some(global), Some(rate)) = (tracing.global, tracing.rate) else {
         return format!("tracing: no QT can be told{}", why());
     };
-    let Some(qt) = global.qt_tangent.filter(|_| tracing.quality != Quality::None) else {
+    // The example protocol decides by where T meets the baseline.
+    let Some(qt) = global.qt_threshold.filter(|_| tracing.quality != Quality::None) else {
         return format!("tracing: no QT can be told{}", why());
     };
     // Fridericia has one form for both sexes, so the chart isn't asked.

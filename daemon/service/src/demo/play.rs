@@ -176,7 +176,7 @@ impl<'s> Play<'s> {
                     qrs: None,
                     rr: None,
                     lead: None,
-                    tangent: true,
+                    tangent: false,
                     why: why.as_str().into(),
                 };
                 (Some(patient.clone()), by, Body::OverRead(read))

@@ -8,6 +8,7 @@
 )]
 
 mod chart;
+mod demo;
 mod files;
 mod folder;
 mod house;
