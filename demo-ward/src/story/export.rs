@@ -19,28 +19,30 @@ pub struct Export {
 pub struct ExportError(#[from] NotARecording);
 
 #[derive(Debug)]
-pub(super) enum Content {
+enum Content {
     Chart(String),
-    Tracing(Sketch, Label),
-    DicomTracing(Sketch, Label),
+    Tracing(Box<(Sketch, Label)>, Form),
+}
+
+/// How a cart sends a tracing.
+#[derive(Debug, Clone, Copy, PartialEq, Eq)]
+enum Form {
+    Csv,
+    Dicom,
 }
 
 impl Export {
-    /// The carts of the ward send DICOM and CSV in turn.
-    pub(super) fn tracing(number: u32, content: Content) -> Self {
-        match content {
-            Content::Tracing(sketch, label) if number % 2 == 0 => Self {
-                name: format!("tracing-{number:04}.dcm"),
-                content: Content::DicomTracing(sketch, label),
-            },
-            content => Self { name: format!("tracing-{number:04}.ecg.csv"), content },
-        }
+    /// The carts of the ward send CSV and DICOM in turn.
+    pub(super) fn tracing(number: u32, drawn: Box<(Sketch, Label)>) -> Self {
+        let (form, end) =
+            if number.is_multiple_of(2) { (Form::Dicom, "dcm") } else { (Form::Csv, "ecg.csv") };
+        Self { name: format!("tracing-{number:04}.{end}"), content: Content::Tracing(drawn, form) }
     }
 
     /// What the cart was to draw, where it is a tracing.
     pub fn sketch(&self) -> Option<&Sketch> {
         match &self.content {
-            Content::Tracing(sketch, _) | Content::DicomTracing(sketch, _) => Some(sketch),
+            Content::Tracing(drawn, _) => Some(&drawn.0),
             Content::Chart(_) => None,
         }
     }
@@ -50,12 +52,14 @@ impl Export {
     /// # Errors
     /// A sketch can't be drawn.
     pub fn bytes(&self) -> Result<Vec<u8>, ExportError> {
-        Ok(match &self.content {
-            Content::Chart(text) => text.clone().into_bytes(),
-            Content::Tracing(sketch, label) => {
-                csv_tracing(&synthesise(sketch)?.0, label).into_bytes()
-            }
-            Content::DicomTracing(sketch, label) => dicom(&synthesise(sketch)?.0, label),
+        let (drawn, form) = match &self.content {
+            Content::Chart(text) => return Ok(text.clone().into_bytes()),
+            Content::Tracing(drawn, form) => (drawn, form),
+        };
+        let (recording, _) = synthesise(&drawn.0)?;
+        Ok(match form {
+            Form::Csv => csv_tracing(&recording, &drawn.1).into_bytes(),
+            Form::Dicom => dicom(&recording, &drawn.1),
         })
     }
 }

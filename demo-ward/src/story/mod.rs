@@ -10,11 +10,12 @@ mod file;
 pub use day::Days;
 pub use export::{Export, ExportError};
 
+use crate::synth::Sketch;
 use crate::write::Label;
 use chrono::{DateTime, TimeDelta, Utc};
 use ebbmark_rules::fact::Sex;
 use ebbmark_rules::ids::PatientId;
-use export::{Charts, Content};
+use export::Charts;
 use file::{EventFile, Happens, OrderFile, PersonFile, TracingFile, WardFile};
 
 /// The whole story.
@@ -209,7 +210,7 @@ struct Moment {
 
 enum Is {
     Rows(Charts),
-    Tracing(Box<Content>),
+    Tracing(Box<(Sketch, Label)>),
     Act(Act),
 }
 
@@ -337,7 +338,12 @@ impl Teller {
         Ok(Moment { at, tell: None, is: Is::Rows(charts) })
     }
 
-    fn tracing(&self, person: &PersonFile, tracing: &TracingFile, at: DateTime<Utc>) -> Content {
+    fn tracing(
+        &self,
+        person: &PersonFile,
+        tracing: &TracingFile,
+        at: DateTime<Utc>,
+    ) -> (Sketch, Label) {
         let birth_date = tracing.birth_date.as_ref().unwrap_or(&person.birth_date).0;
         let label = Label {
             patient_id: person.number.clone(),
@@ -352,7 +358,7 @@ impl Teller {
         };
         // Each occasion has a chance of its own: the moment.
         let seed = at.timestamp().unsigned_abs();
-        Content::Tracing(tracing.sketch(tracing.heart.unwrap_or(person.heart), seed), label)
+        (tracing.sketch(tracing.heart.unwrap_or(person.heart), seed), label)
     }
 
     /// Puts the moments in order and together.
@@ -376,9 +382,9 @@ impl Teller {
                         heard.extend(moment.tell);
                         together.join(charts);
                     }
-                    Is::Tracing(content) => {
+                    Is::Tracing(drawn) => {
                         tracings += 1;
-                        let export = Export::tracing(tracings, *content);
+                        let export = Export::tracing(tracings, drawn);
                         after.push((moment.tell, Act::Export(export)));
                     }
                     Is::Act(act) => after.push((moment.tell, act)),
