@@ -468,14 +468,11 @@ mod tests {
             panic!()
         };
         assert_eq!((chart.rows.len(), chart.left_out, chart.bad.len()), (3, 1, 1));
-        let values: Vec<_> = chart
-            .rows
-            .iter()
-            .map(|row| match &row.body {
-                Body::Result(result) => result.value.map(|value| value.number),
-                _ => panic!(),
-            })
-            .collect();
+        let value = |row: &Row| {
+            let Body::Result(result) = &row.body else { panic!() };
+            result.value.map(|value| value.number)
+        };
+        let values: Vec<_> = chart.rows.iter().map(value).collect();
         assert_eq!(values, [Some(3.1), Some(4.1), None]);
         assert_eq!(&*chart.bad[0].why, "the code `CL` of `LAB` is not known");
     }

@@ -1,6 +1,8 @@
 //! Values as conditions see them: bounds, spoilt specimens, calcium in its best form, medicines whose route nobody
 //! knows. Each condition is written as in a protocol and asked of a patient made of facts.
 
+#![allow(clippy::unwrap_used, reason = "a test whose patient can't be made fails")]
+
 use crate::config::{MEDICINES, PROTOCOL};
 use chrono::{NaiveDate, TimeDelta};
 use ebbmark_rules::evaluate::{evaluate, tisdale_of};
