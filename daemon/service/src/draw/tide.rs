@@ -5,7 +5,7 @@ use ebbmark_rules::alert::Tide;
 use maud::{Markup, html};
 
 const WIDTH: f64 = 640.0;
-const HEIGHT: f64 = 96.0;
+const HEIGHT: f64 = 110.0;
 const MARGIN: f64 = 24.0;
 /// Where the line itself lies.
 const WATER: f64 = 56.0;
@@ -29,7 +29,9 @@ pub fn tide(tide: &Tide, caption: &str) -> Markup {
                 line x1=(px(x)) x2=(px(x)) y1=(WATER - 16.0) y2=(WATER + 16.0) stroke="#000" stroke-width=(weight) {}
                 line x1=(px(x)) x2=(px(scale.right())) y1=(WATER + 8.0) y2=(WATER + 8.0)
                     stroke="#000" stroke-width=(weight) {}
-                text x=(px(x)) y=(WATER + 31.0) text-anchor="middle" {
+                // In two rows, so that the names of neighbours don't run into each other.
+                @let row = if n % 2 == 0 { 31.0 } else { 45.0 };
+                text x=(px(x)) y=(px(WATER + row)) text-anchor="middle" {
                     (format!("{limit:.0} {}", tier.as_str()))
                 }
             }

@@ -7,8 +7,7 @@ use super::figure::Figure;
 use super::letter::{Letter, Line, Part, Section};
 use maud::{DOCTYPE, Markup, html};
 
-const BODY: &str =
-    "margin:0;padding:12px;max-width:40em;font:16px/1.45 sans-serif;color:#111;background:#fff";
+const BODY: &str = "margin:0;padding:12px;max-width:40em;font:16px/1.45 sans-serif;color:#111;background:#fff;overflow-wrap:anywhere";
 const HEAD: &str =
     "margin:0 0 10px;font-size:21px;line-height:1.25;border-left:6px solid #111;padding-left:10px";
 const FIRST: &str = "margin:0 0 8px;font-size:17px;font-weight:bold";

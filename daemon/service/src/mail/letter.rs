@@ -237,24 +237,25 @@ impl Desk<'_> {
             because => format!(": {because}"),
         };
         let mut opening = Vec::new();
+        let mut context = Vec::new();
         match notice.reason {
-            NoticeReason::Withdrawn => opening.push(format!(
+            NoticeReason::Withdrawn => context.push(format!(
                 "This alert of {raised} no longer stands{because}. Nothing is asked of you for it any more."
             )),
-            NoticeReason::Closed => opening.push(format!(
+            NoticeReason::Closed => context.push(format!(
                 "This alert of {raised} is over{because}. Nothing is asked of you for it any more."
             )),
             NoticeReason::Escalated => {
-                opening.push(format!("Nobody has answered since {raised}. It comes to you as: {}.", notice.role));
+                context.push(format!("Nobody has answered since {raised}. It comes to you as: {}.", notice.role));
             }
             NoticeReason::SnoozeEnded => {
-                opening.push(format!("This alert of {raised} was put off; that time has ended{because}."));
+                context.push(format!("This alert of {raised} was put off; that time has ended{because}."));
             }
             NoticeReason::HandedOver => {
-                opening.push(format!("This alert of {raised} comes to you as: {}{because}.", notice.role));
+                context.push(format!("This alert of {raised} comes to you as: {}{because}.", notice.role));
             }
             NoticeReason::TierRaised => {
-                opening.push(format!("Newer facts raised this alert of {raised} to {}.", alert.tier));
+                context.push(format!("Newer facts raised this alert of {raised} to {}.", alert.tier));
             }
             NoticeReason::Raised => {}
         }
@@ -267,6 +268,8 @@ impl Desk<'_> {
             let then = then.map(|role| format!(" Then it goes to: {role}.")).unwrap_or_default();
             opening.push(format!("Answer by {}.{then}", self.by(at, notice.at)));
         }
+        // What to do comes before how it came to this.
+        opening.append(&mut context);
         if !evidence.protocol_signed {
             opening.push(
                 "EXAMPLE PROTOCOL, signed by no hospital: nobody should act on it alone."
@@ -291,7 +294,10 @@ impl Desk<'_> {
             let nothing = "Nothing that the protocol asks for. It may not ask for everything.";
             unknown.lines.push(Line::Said(nothing.to_owned()));
         }
-        let baseline = (!evidence.baseline.is_empty()).then_some(&evidence.baseline);
+        // Where there is none, that is among what is not known.
+        let has_baseline = !evidence.baseline.is_empty()
+            && !evidence.unknown.iter().any(|line| line.contains("no baseline"));
+        let baseline = has_baseline.then_some(&evidence.baseline);
         vec![
             seen,
             Section::said("Why it matters for this patient", &evidence.why),
