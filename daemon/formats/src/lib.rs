@@ -64,9 +64,10 @@ pub enum Kind {
     CsvChart,
 }
 
-/// The sniffing table: a format, how its bytes look, how it is read. In the order in which they are tried.
+type Looks = fn(&[u8]) -> bool;
 type Reader = fn(&[u8], &Companions<'_>, &Site) -> Result<Content, Error>;
-const FORMATS: [(Kind, fn(&[u8]) -> bool, Reader); 4] = [
+/// The sniffing table: a format, how its bytes look, how it is read. In the order in which they are tried.
+const FORMATS: [(Kind, Looks, Reader); 4] = [
     (Kind::Dicom, dicom::looks_like, dicom::read),
     (Kind::CsvTracing, csv_tracing::looks_like, csv_tracing::read),
     (Kind::CsvChart, csv_chart::looks_like, csv_chart::read),

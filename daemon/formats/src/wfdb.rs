@@ -1,6 +1,11 @@
 //! WFDB records: a text header that names one or more sample files (the WFDB applications guide, header(5) and
 //! signal(5)). Read: formats 16 and 212. Values agree with wfdb-python to the sample.
 
+#![allow(
+    clippy::cast_possible_truncation,
+    reason = "samples are kept as f32; checksums are modulo 2^16"
+)]
+
 use crate::{Companions, Content, Error, Site, TracingFile};
 use chrono::{NaiveDate, NaiveDateTime, NaiveTime};
 use ebbmark_measure::{Recording, Signal};

@@ -9,8 +9,6 @@ pub mod draw;
 pub mod intake;
 pub mod ledger;
 pub mod mail;
-pub mod page;
-pub mod people;
 pub mod qtc;
 pub mod reading;
 pub mod report;

@@ -1,6 +1,12 @@
 //! The rhythm group's channels in microvolts (PS3.3 C.10.9):
 //! value = (sample × sensitivity × correction + baseline) in the channel's stated unit.
 
+#![allow(
+    clippy::cast_possible_truncation,
+    clippy::cast_sign_loss,
+    reason = "counts that DICOM writes as numbers or text, checked against what is there; samples kept as f32"
+)]
+
 use super::{code, hold, items, number, text};
 use crate::{Error, Site};
 use dicom_object::{InMemDicomObject, Tag};

@@ -3,6 +3,12 @@
 //!
 //! Differences are always machine minus reader, in ms.
 
+#![allow(
+    clippy::cast_possible_truncation,
+    clippy::cast_sign_loss,
+    reason = "places among a list's own values"
+)]
+
 mod deming;
 mod limits;
 mod pairs;

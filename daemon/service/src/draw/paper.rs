@@ -2,6 +2,12 @@
 //! units are millimetres and it states its size in millimetres, so that a ruler on the print reads true.
 //! (The paper's scale: common practice, no source.)
 
+#![allow(
+    clippy::cast_possible_truncation,
+    clippy::cast_sign_loss,
+    reason = "seconds and millimetres to sample numbers"
+)]
+
 use super::path;
 use ebbmark_measure::Recording;
 use maud::{Markup, html};

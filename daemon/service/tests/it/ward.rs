@@ -187,7 +187,7 @@ async fn restart_gives_the_same_decisions_and_tells_nobody_again() {
     let service = house.start_at(clock).await;
     let folded = service.folded();
     assert_eq!((folded.different, folded.unclaimed), (0, 0), "{folded:?}");
-    assert_eq!(folded.stored as usize, before.len());
+    assert_eq!(usize::try_from(folded.stored).unwrap(), before.len());
     service.stop().await.unwrap();
     let after = Reader::open(&house.store()).unwrap().decisions_after(0).unwrap();
     assert_eq!(before, after);
@@ -208,7 +208,9 @@ async fn deadline_missed_while_down_is_caught_up_as_of_its_due_time() {
     wait_doctor(&house);
     let escalated = call(&house).life.into_iter().find_map(|decision| match decision {
         Decision::Life { at, step: LifeStep::Escalated { .. }, .. } => Some(at),
-        _ => None,
+        Decision::Raised(_) | Decision::Changed(_) | Decision::Life { .. } | Decision::Tell(_) => {
+            None
+        }
     });
     assert_eq!(escalated, Some(start() + TimeDelta::minutes(15)));
     service.stop().await.unwrap();
