@@ -225,7 +225,8 @@ pub fn baseline(view: &View<'_>) -> String {
     text
 }
 
-fn all_unknown(view: &View<'_>, unknown: &[Box<str>]) -> Vec<Box<str>> {
+/// Everything that is not known, each once.
+pub(crate) fn all_unknown(view: &View<'_>, unknown: &[Box<str>]) -> Vec<Box<str>> {
     let mut found: Vec<Box<str>> = unknown.to_vec();
     let mut add = |line: String| {
         if !found.iter().any(|known| **known == *line) {

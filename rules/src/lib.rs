@@ -2,6 +2,7 @@
 
 pub mod alert;
 pub mod codes;
+pub mod consider;
 pub mod correction;
 pub mod decide;
 pub mod electrolytes;
@@ -14,6 +15,7 @@ pub mod kidney;
 pub mod medicines;
 pub mod patient;
 pub mod protocol;
+pub mod replay;
 pub mod routes;
 pub mod score;
 pub mod units;

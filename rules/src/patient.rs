@@ -298,6 +298,20 @@ impl Patient {
             .map(|(at, _)| *at)
     }
 
+    /// Days spent on a ward between two moments; `None` where no admission is known.
+    pub fn days_here(&self, from: At, until: At) -> Option<f64> {
+        let held: Vec<_> = self
+            .stays
+            .iter()
+            .filter(|(at, _)| *at < until && !self.cancelled_stays.contains(at))
+            .collect();
+        held.first()?;
+        let ends = held.iter().skip(1).map(|(at, _)| *at).chain([until]);
+        let here = held.iter().zip(ends).filter(|((_, place), _)| place.is_some());
+        let time = here.map(|((start, _), end)| (end - (*start).max(from)).max(TimeDelta::zero()));
+        Some(time.sum::<TimeDelta>().num_seconds() as f64 / 86_400.0)
+    }
+
     /// Full years at a moment.
     pub fn age(&self, now: At) -> Option<u32> {
         now.date_naive().years_since(self.described.birth_date?)

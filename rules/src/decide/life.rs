@@ -8,7 +8,7 @@ use crate::fact::At;
 use crate::ids::{AlertId, ContentHash, PatientId, Person, Private, Role, RuleId, Ward};
 use crate::protocol::{Protocol, within};
 use crate::verdict::Basis;
-use chrono::{NaiveTime, TimeDelta};
+use chrono::{LocalResult, NaiveDate, NaiveTime, TimeDelta, TimeZone};
 use std::collections::BTreeSet;
 
 /// An alert that is open or acknowledged.
@@ -457,10 +457,8 @@ impl OpenAlert {
         }
         let local = at.with_timezone(&protocol.zone).time();
         if let Some(hours) = tier.quiet.filter(|hours| within(*hours, local)) {
-            self.deadline = Some((
-                quiet_end(hours.1, local, at),
-                Awaits::QuietEnd(roles, reason, because.into()),
-            ));
+            let end = quiet_end(hours.1, protocol.zone, at);
+            self.deadline = Some((end, Awaits::QuietEnd(roles, reason, because.into())));
             return;
         }
         let answer_by = tier.answer_within.map(|within| at + within);
@@ -523,12 +521,24 @@ impl OpenAlert {
     }
 }
 
-/// The moment at which quiet hours end next. The hours are a wall clock's; over a clock change this is up to an hour
-/// off, and then the end is looked at again, so nothing is told within quiet hours.
-fn quiet_end(end: NaiveTime, local: NaiveTime, at: At) -> At {
-    let mut wait = end - local;
-    if wait <= TimeDelta::zero() {
-        wait += TimeDelta::days(1);
-    }
-    at + wait
+/// The moment after `at` at which a wall clock of the zone first shows the end of quiet hours. Where a clock change
+/// skips that time, when the clock of before would have shown it; where it shows it twice, the first that is to come.
+fn quiet_end(end: NaiveTime, zone: chrono_tz::Tz, at: At) -> At {
+    let today = at.with_timezone(&zone).date_naive();
+    let days = [today, today + chrono::Days::new(1), today + chrono::Days::new(2)];
+    let shows = |day: NaiveDate| {
+        let wall = day.and_time(end);
+        match zone.from_local_datetime(&wall) {
+            LocalResult::Single(one) => [Some(one), None],
+            LocalResult::Ambiguous(first, second) => [Some(first), Some(second)],
+            LocalResult::None => [
+                zone.from_local_datetime(&(wall - TimeDelta::hours(3)))
+                    .earliest()
+                    .map(|earlier| earlier + TimeDelta::hours(3)),
+                None,
+            ],
+        }
+    };
+    let moments = days.into_iter().flat_map(shows).flatten().map(|moment| moment.to_utc());
+    moments.filter(|moment| *moment > at).min().unwrap_or(at + TimeDelta::days(1))
 }

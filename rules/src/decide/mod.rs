@@ -258,9 +258,29 @@ impl Decider {
         now: At,
         look: impl FnOnce(&View<'_>) -> T,
     ) -> Option<T> {
+        self.suppose(patient, &[], now, look)
+    }
+
+    /// The same, had these facts come too. Nothing is remembered.
+    pub fn suppose<T>(
+        &self,
+        patient: &PatientId,
+        facts: &[Fact],
+        now: At,
+        look: impl FnOnce(&View<'_>) -> T,
+    ) -> Option<T> {
         let protocol = self.protocol.as_ref()?;
-        let whole = self.whole(&self.root(patient))?;
+        let mut whole = self.whole(&self.root(patient))?;
+        if !facts.is_empty() {
+            let whole = whole.to_mut();
+            facts.iter().for_each(|fact| whole.take(fact));
+        }
         Some(look(&View::new(&whole, protocol, &self.list, now)))
+    }
+
+    /// Days that a patient spent on a ward within a period; `None` where no feed told of an admission.
+    pub fn days_here(&self, patient: &PatientId, period: crate::replay::Period) -> Option<f64> {
+        self.patients.get(patient)?.days_here(period.from, period.until)
     }
 
     /// Everyone known, by the number that goes on.
@@ -364,7 +384,7 @@ impl Decider {
         };
         self.heard.insert(feed, at);
         self.feed_is(feed, false, at, out);
-        self.expect(feed);
+        self.expect(feed, at);
     }
 
     /// From the day a protocol asks for a feed, its silence counts, also if it was never heard.
@@ -374,18 +394,18 @@ impl Decider {
             if self.protocol.as_ref().is_some_and(asked) {
                 self.heard.entry(feed).or_insert(at);
             }
-            self.expect(feed);
+            self.expect(feed, at);
         }
     }
 
-    /// Sets the moment at which a feed will have been silent for too long.
-    fn expect(&mut self, feed: Feed) {
+    /// Sets the moment at which a feed will have been silent for too long, which may be now.
+    fn expect(&mut self, feed: Feed, now: At) {
         if let Some(known) = self.feed_due.remove(&feed) {
             self.due.remove(&(known, Due::Feed(feed)));
         }
         let after = self.protocol.as_ref().and_then(|protocol| protocol.silent_after.get(&feed));
         if let (Some(heard), Some(after)) = (self.heard.get(&feed), after) {
-            let at = *heard + *after;
+            let at = (*heard + *after).max(now);
             self.feed_due.insert(feed, at);
             self.due.insert((at, Due::Feed(feed)));
         }

@@ -8,4 +8,5 @@
 )]
 
 mod config;
+mod simulation;
 mod values;
