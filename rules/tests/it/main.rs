@@ -8,5 +8,6 @@
 )]
 
 mod config;
+mod mistakes;
 mod simulation;
 mod values;
