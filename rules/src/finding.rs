@@ -43,10 +43,39 @@ impl Finding {
         self
     }
 
-    /// What the TOML reader found, with its place.
+    /// What the TOML reader found, with its place, in words for people who don't know what an `f64` is.
     pub fn of_toml(text: &str, error: &toml::de::Error) -> Self {
         let offset = error.span().map_or(0, |span| span.start);
-        Self::at(text, offset, error.message().replace('\n', "; "))
+        let message = error.message().replace('\n', "; ");
+        if message.starts_with("wanted exactly 1 element") {
+            return Self::at(
+                text,
+                offset,
+                "a condition asks exactly one thing, and this asks none or several",
+            )
+            .hint("write `all = [ … ]` or `any = [ … ]` around them");
+        }
+        let typed =
+            message.strip_prefix("invalid type: ").and_then(|rest| rest.split_once(", expected "));
+        match typed {
+            Some((found, expected)) => {
+                let found = ["string ", "integer ", "float ", "boolean "]
+                    .iter()
+                    .find_map(|kind| found.strip_prefix(kind))
+                    .unwrap_or(found);
+                let expected = match expected {
+                    "f64" => "a number",
+                    "usize" | "u32" | "u64" => "a whole number of 0 or more",
+                    "a string" => "a text in quotation marks",
+                    "a sequence" => "a list in square brackets",
+                    "a boolean" => "`true` or `false`",
+                    other if other.starts_with("struct ") => "a table in braces",
+                    other => other,
+                };
+                Self::at(text, offset, format!("expected {expected}, found {found}"))
+            }
+            None => Self::at(text, offset, message),
+        }
     }
 }
 

@@ -12,6 +12,9 @@ use chrono::{NaiveDate, NaiveTime, TimeDelta};
 use std::collections::BTreeSet;
 use toml::Spanned;
 
+const LEADS: [&str; 12] =
+    ["I", "II", "III", "aVR", "aVL", "aVF", "V1", "V2", "V3", "V4", "V5", "V6"];
+
 /// Collects mistakes and knows the text they stand in.
 struct Check<'t> {
     text: &'t str,
@@ -30,6 +33,7 @@ pub(super) fn checked(text: &str, file: File) -> Result<Protocol, Vec<Finding>> 
     shown.extend(
         file.reading.shown.iter().copied().filter(|formula| *formula != file.reading.formula),
     );
+    let lead = check.lead(&file.reading.lead);
     let wide_qrs_tier = check.tier(&tier_names, &file.wide_qrs.highest_tier);
     let technical = TechnicalTier {
         tier: check.tier(&tier_names, &file.technical.tier),
@@ -72,7 +76,7 @@ pub(super) fn checked(text: &str, file: File) -> Result<Protocol, Vec<Finding>> 
         reading: ReadingRule {
             formula: file.reading.formula,
             t_end: file.reading.t_end,
-            lead: (!file.reading.lead.eq_ignore_ascii_case("global")).then_some(file.reading.lead),
+            lead,
             shown,
         },
         baseline_within: minutes(file.baseline.before_first_medicine_within_days.0 * 1440.0),
@@ -122,6 +126,23 @@ impl Check<'_> {
             );
             chrono_tz::UTC
         })
+    }
+
+    /// `None` for the global reading.
+    fn lead(&mut self, lead: &Spanned<String>) -> Option<String> {
+        let name = lead.as_ref().as_str();
+        let is = |known: &&str| known.eq_ignore_ascii_case(name);
+        if name.eq_ignore_ascii_case("global") {
+            return None;
+        }
+        if !LEADS.iter().any(|known| is(&known)) {
+            self.add(
+                lead.span().start,
+                format!("`{name}` is neither `global` nor one of the twelve leads"),
+                format!("write \"global\", or one of {}", LEADS.join(", ")),
+            );
+        }
+        Some(name.to_owned())
     }
 
     fn approval(&mut self, file: &File) -> Option<(String, NaiveDate)> {

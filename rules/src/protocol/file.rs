@@ -50,7 +50,7 @@ pub(super) struct Head {
 pub(super) struct ReadingIs {
     pub formula: Formula,
     pub t_end: TEnd,
-    pub lead: String,
+    pub lead: Spanned<String>,
     #[serde(default)]
     pub shown: Vec<Formula>,
 }

@@ -40,17 +40,26 @@ fn each_mistake_is_told_in_words_at_its_line_and_column() {
         let text = PROTOCOL.replacen(&mistake.change, &mistake.to, 1);
         let from = if mistake.from_start { 0 } else { place };
         let at = match &mistake.at {
-            Some(at) => from + text[from..].find(at.as_str()).unwrap_or_else(|| panic!("{}", mistake.kind)),
+            Some(at) => {
+                from + text[from..].find(at.as_str()).unwrap_or_else(|| panic!("{}", mistake.kind))
+            }
             None => place,
         };
         let spot = Spot::of(&text, at);
         let found = check_together(&text, MEDICINES).in_protocol;
         let told = found.iter().any(|one| {
-            one.spot == spot && (one.message.contains(&mistake.says) || one.hint.as_ref().is_some_and(|hint| hint.contains(&mistake.says)))
+            one.spot == spot
+                && (one.message.contains(&mistake.says)
+                    || one.hint.as_ref().is_some_and(|hint| hint.contains(&mistake.says)))
         });
         if !told {
             let found: Vec<String> = found.iter().map(ToString::to_string).collect();
-            missed.push(format!("{}: wanted at {spot:?}: {}\n    {}", mistake.kind, mistake.says, found.join("\n    ")));
+            missed.push(format!(
+                "{}: wanted at {spot:?}: {}\n    {}",
+                mistake.kind,
+                mistake.says,
+                found.join("\n    ")
+            ));
         }
     }
     assert!(missed.is_empty(), "{}", missed.join("\n"));
