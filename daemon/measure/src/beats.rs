@@ -10,7 +10,7 @@
 )]
 
 use crate::clean::{Clean, HZ};
-use crate::filter::Section;
+use crate::filter::{Section, filtered};
 
 /// R peaks as samples at the working rate, in order.
 pub(crate) fn r_peaks(leads: &[Clean]) -> Vec<usize> {
@@ -19,14 +19,15 @@ pub(crate) fn r_peaks(leads: &[Clean]) -> Vec<usize> {
         return Vec::new();
     }
     let (mut summed, mut rms, mut weights) = (vec![0.0f32; length], vec![0.0f32; length], 0.0);
-    for lead in leads {
-        let slope = slope_of(&lead.uv);
+    let uv: Vec<&[f32]> = leads.iter().map(|lead| lead.uv.as_slice()).collect();
+    for (steep, deep) in band(&uv, 5.0, 25.0).iter().zip(band(&uv, 3.0, 40.0)) {
+        let slope = slope_of(steep);
         let weight = 1.0 / (quantile(&slope, 0.5) + 0.02);
         weights += weight;
         for (sum, s) in summed.iter_mut().zip(&slope) {
             *sum += weight * s;
         }
-        let z = deflection(&lead.uv);
+        let z = deflection(deep);
         for (sum, z) in rms.iter_mut().zip(&z) {
             *sum += z * z;
         }
@@ -44,9 +45,8 @@ pub(crate) fn r_peaks(leads: &[Clean]) -> Vec<usize> {
     at
 }
 
-/// Slope between 5 and 25 Hz against the lead's own 98th centile, at most 3.
-fn slope_of(uv: &[f32]) -> Vec<f32> {
-    let x = band(uv, 5.0, 25.0);
+/// Slope of a filtered lead against its own 98th centile, at most 3.
+fn slope_of(x: &[f32]) -> Vec<f32> {
     let last = x.len() - 1;
     let mut slope: Vec<f32> =
         (0..x.len()).map(|i| (x[(i + 1).min(last)] - x[i.saturating_sub(1)]).abs() / 2.0).collect();
@@ -55,21 +55,16 @@ fn slope_of(uv: &[f32]) -> Vec<f32> {
     slope
 }
 
-/// Deflection between 3 and 40 Hz against the lead's own 99th centile.
-fn deflection(uv: &[f32]) -> Vec<f32> {
-    let mut x = band(uv, 3.0, 40.0);
+/// Deflection of a filtered lead against its own 99th centile.
+fn deflection(mut x: Vec<f32>) -> Vec<f32> {
     let top = quantile(&x.iter().map(|v| v.abs()).collect::<Vec<_>>(), 0.99) + 1e-9;
     x.iter_mut().for_each(|v| *v /= top);
     x
 }
 
-fn band(uv: &[f32], low: f64, high: f64) -> Vec<f32> {
-    let mut x = uv.to_vec();
-    for section in [Section::high_pass(HZ, low), Section::low_pass(HZ, high)].into_iter().flatten()
-    {
-        section.both_ways(&mut x);
-    }
-    x
+fn band(leads: &[&[f32]], low: f64, high: f64) -> Vec<Vec<f32>> {
+    let sections = [Section::high_pass(HZ, low), Section::low_pass(HZ, high)];
+    filtered(&sections.into_iter().flatten().collect::<Vec<_>>(), leads)
 }
 
 /// Value below which a share of the samples lies. Long signals are sampled: a centile of 20,000 is as good.

@@ -188,20 +188,25 @@ fn agreed(mut votes: Vec<usize>, leads: usize, hz: f64) -> Vec<usize> {
 /// Whether the mains frequency stands out against its neighbours.
 fn hums(uv: &[f32], mains: f64) -> bool {
     let piece = &uv[..uv.len().min(5000)];
-    let at = power(piece, mains);
-    let beside = [-6.0, -4.0, 4.0, 6.0].map(|d| power(piece, mains + d)).iter().sum::<f64>() / 4.0;
+    let [at, beside @ ..] = powers(piece, [0.0, -6.0, -4.0, 4.0, 6.0].map(|d| mains + d));
+    let beside = beside.iter().sum::<f64>() / 4.0;
     at > 8.0 * beside && at.sqrt() > 4.0
 }
 
-/// Squared amplitude at one frequency (Goertzel).
-fn power(x: &[f32], hz: f64) -> f64 {
-    let coefficient = 2.0 * (2.0 * std::f64::consts::PI * hz / HZ).cos();
-    let (mut s1, mut s2) = (0.0, 0.0);
+/// Squared amplitudes at some frequencies (Goertzel), all in one go over the samples.
+fn powers<const N: usize>(x: &[f32], hz: [f64; N]) -> [f64; N] {
+    let coefficient = hz.map(|hz| 2.0 * (2.0 * std::f64::consts::PI * hz / HZ).cos());
+    let (mut s1, mut s2) = ([0.0; N], [0.0; N]);
     for v in x {
-        let s = f64::from(*v) + coefficient * s1 - s2;
-        (s2, s1) = (s1, s);
+        for k in 0..N {
+            let s = f64::from(*v) + coefficient[k] * s1[k] - s2[k];
+            (s2[k], s1[k]) = (s1[k], s);
+        }
     }
-    (s1 * s1 + s2 * s2 - coefficient * s1 * s2) * 4.0 / (x.len().max(1) as f64).powi(2)
+    let scale = 4.0 / (x.len().max(1) as f64).powi(2);
+    std::array::from_fn(|k| {
+        (s1[k] * s1[k] + s2[k] * s2[k] - coefficient[k] * s1[k] * s2[k]) * scale
+    })
 }
 
 #[cfg(test)]

@@ -3,12 +3,11 @@ read by nets that saw it; writes what the project's scorer reads.
 
     python engine.py FOLDS OUT      FOLDS as `train.py write-folds` left it; writes OUT/ludb.csv, qtdb.csv, answers.csv
 """
-import subprocess
 import sys
 from pathlib import Path
 
+import program
 import records
-import windows
 
 COLUMNS = "record,lead,beat_r_sample,qrs_on_sample,qrs_off_sample,t_end_sample"
 
@@ -21,8 +20,7 @@ def measured(base, kind, name, nets):
         r = records.experts(base, kind, name, hz)[0].r
         first = max(0, int(r.min() - 60 * hz))
         x = x[first:int(r.max() + 60 * hz)]
-    done = subprocess.run([windows.PROGRAM, "marks", nets], input=windows.packed(x, hz), stdout=subprocess.PIPE, check=True)
-    answer, *rows = done.stdout.decode().splitlines()
+    answer, *rows = program.run(x, hz, "marks", nets).decode().splitlines()
     moved = []
     for row in rows:
         lead, *at = row.split(",")
@@ -33,7 +31,7 @@ def measured(base, kind, name, nets):
 def main():
     folds, out = Path(sys.argv[1]), Path(sys.argv[2])
     base = records.folder()
-    windows.build()
+    program.build()
     out.mkdir(parents=True, exist_ok=True)
     rows, answers = {"ludb": [COLUMNS], "qtdb": [COLUMNS]}, ["kind,record,answer,qt_ms,doubt_ms,why"]
     for held in sorted(folds.glob("fold*.records")):

@@ -23,7 +23,7 @@ import numpy as np
 import augment
 import nets
 import records
-import score
+import tally
 import weights
 import windows
 
@@ -39,8 +39,7 @@ QRS_TRAIN = dict(steps=900, twelve=8, two=16, one=0, parts=(1.0, 0.7, 0.7))
 PLAIN = dict(stretch=0.40, t_gain=0.0, two_phases=0.2, u_wave=0.0, noise_uv=25.0)
 RECIPE = {
     "t-end-1": dict(view="T", size=T_SIZE, train=T_TRAIN, how=PLAIN),
-    "t-end-2": dict(view="T", size=T_SIZE, train=T_TRAIN, how=dict(PLAIN, t_gain=0.2, two_phases=0.1, u_wave=0.15)),
-    "t-end-3": dict(view="T", size=T_SIZE, train=T_TRAIN, how=dict(PLAIN, stretch=0.45, noise_uv=40.0)),
+    "t-end-2": dict(view="T", size=T_SIZE, train=T_TRAIN, how=dict(PLAIN, stretch=0.45, noise_uv=40.0)),
     "qrs-1": dict(view="QRS", size=QRS_SIZE, train=QRS_TRAIN, how=dict(stretch=0.15, noise_uv=10.0, spike=0.1)),
     "qrs-2": dict(view="QRS", size=QRS_SIZE, train=QRS_TRAIN, how=dict(stretch=0.15, noise_uv=10.0, spike=0.25)),
 }
@@ -164,7 +163,7 @@ def main():
         cross_validate(data, names, given.split, given.keep)
     elif given.what == "scores":
         answers = {n: pickle.loads((given.keep / f"{n}-{given.split}.pickle").read_bytes()) for n in names}
-        found = score.scores(data, answers, folds_of(data, given.split))
+        found = tally.scores(data, answers, folds_of(data, given.split))
         print(json.dumps(found, indent=1))
         SCORES.write_text(json.dumps(found, indent=1) + "\n")
     elif given.what == "weights":

@@ -4,7 +4,7 @@ import jax.numpy as jnp
 import numpy as np
 
 import nets
-import score
+import tally
 
 MOST = 15
 
@@ -96,6 +96,6 @@ def fixture(path, data, trained, recipe, views):
                    for n, w in trained.items() if n.startswith(start)]
         both, each = ([np.asarray(jax.nn.log_softmax(a[i], -1)) for a in answers] for i in (0, 1))
         for i, name in enumerate(outputs):
-            add(f"{name}_global", score.pooled([b[0, i] for b in both]), 5)
-            add(f"{name}_lead_0", score.pooled([e[0, 0, i] for e in each]), 5)
+            add(f"{name}_global", tally.pooled([b[0, i] for b in both]), 5)
+            add(f"{name}_lead_0", tally.pooled([e[0, 0, i] for e in each]), 5)
     path.write_text("\n".join(lines) + "\n")

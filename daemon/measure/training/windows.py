@@ -1,16 +1,11 @@
 """Averaged beats of every development record, computed by the Rust that also computes them when measuring."""
-import subprocess
 from dataclasses import dataclass
-from pathlib import Path
 
 import numpy as np
 
 import nets
+import program
 import records
-
-ROOT = Path(__file__).resolve().parents[3]
-PROGRAM = ROOT / "target/release/examples/training"
-
 
 @dataclass
 class Windows:
@@ -31,22 +26,10 @@ class Windows:
         return self.kind, self.name
 
 
-def build():
-    subprocess.run(["cargo", "build", "-q", "--release", "-p", "ebbmark-measure", "--example", "training"],
-                   cwd=ROOT, check=True)
-
-
-def packed(x, hz):
-    """x (samples, leads) in uV, as the program reads it."""
-    head = np.array([x.shape[1], len(x)], "<u4").tobytes() + np.array([hz], "<f4").tobytes()
-    return head + np.ascontiguousarray(x.T, "<f4").tobytes()
-
-
 def averages(x, hz):
     """x (samples, leads) -> R peaks in seconds, rr in ms, low and wide tracks."""
-    done = subprocess.run([PROGRAM, "windows"], input=packed(x, hz), stdout=subprocess.PIPE, check=True)
     leads, n, w = x.shape[1], nets.T.track_points, nets.QRS.track_points
-    out = np.frombuffer(done.stdout, "<f4").reshape(-1, 2 + leads * (n + w))
+    out = np.frombuffer(program.run(x, hz, "windows"), "<f4").reshape(-1, 2 + leads * (n + w))
     beats, split = len(out), 2 + leads * n
     return (out[:, 0].astype(float), out[:, 1].astype(float), out[:, 2:split].reshape(beats, leads, n),
             out[:, split:].reshape(beats, leads, w))
@@ -71,6 +54,6 @@ def one(base, kind, name):
 
 
 def everything():
-    build()
+    program.build()
     base = records.folder()
     return [one(base, kind, name) for kind in ("ludb", "qtdb") for name in records.names(base, kind)]

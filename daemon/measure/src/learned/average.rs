@@ -28,7 +28,7 @@ const LENGTH_OF_IRREGULAR: f32 = 0.35;
 /// Beats are grouped within stretches of this many, so that a slow change of shape is followed.
 const STRETCH: usize = 16;
 /// More groups than this in a stretch, and beats of less equal length are averaged together.
-const MANY_GROUPS: usize = 4;
+const MANY_GROUPS: usize = 1;
 /// Low-pass limits for the T wave and for the QRS, Hz.
 const LOW_HZ: f32 = 35.0;
 const WIDE_HZ: f32 = 90.0;
