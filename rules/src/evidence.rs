@@ -290,20 +290,22 @@ pub fn tide(view: &View<'_>) -> Option<Tide> {
 /// Lower limits of the deciding formula that are enough by themselves. One that counts only together with something else
 /// is no shore: `call from 460` on a rule that also asks for a rise of 60 ms would mislead.
 fn shores(view: &View<'_>, condition: &Condition, tier: &str, found: &mut Vec<(f64, TierName)>) {
-    match condition {
-        Condition::Any(of) => of.iter().for_each(|part| shores(view, part, tier, found)),
-        Condition::All(of) if of.len() == 1 => {
-            of.iter().for_each(|part| shores(view, part, tier, found));
-        }
-        Condition::Qtc(is) if is.by.is_none() => {
-            let named =
-                is.at_least.as_ref().and_then(|name| view.protocol.limits.get(name.as_ref()));
-            let ms =
-                is.at_least_ms.map(|ms| ms.0).or_else(|| named.map(|limit| limit_for(view, limit)));
-            if let Some(ms) = ms {
-                found.push((ms, TierName::new(tier)));
-            }
-        }
-        _ => {}
+    let parts: &[Condition] = if let Condition::Any(parts) = condition {
+        parts
+    } else if let Condition::All(parts) = condition
+        && parts.len() == 1
+    {
+        parts
+    } else {
+        &[]
+    };
+    parts.iter().for_each(|part| shores(view, part, tier, found));
+    if let Condition::Qtc(is) = condition
+        && is.by.is_none()
+    {
+        let named = is.at_least.as_ref().and_then(|name| view.protocol.limits.get(name.as_ref()));
+        let ms =
+            is.at_least_ms.map(|ms| ms.0).or_else(|| named.map(|limit| limit_for(view, limit)));
+        found.extend(ms.map(|ms| (ms, TierName::new(tier))));
     }
 }
