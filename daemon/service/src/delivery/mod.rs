@@ -101,21 +101,21 @@ fn settled(message: &Outgoing, answer: Answer, now: At) -> Sending {
     match answer {
         Answer::Sent { reply } => {
             tracing::info!(
-                message = message.id,
+                outbox = message.id,
                 attempts = message.attempts + 1,
                 "a message was sent"
             );
             Sending::Sent { reply }
         }
         Answer::Refused { verb, reply } => {
-            tracing::error!(message = message.id, verb, "the server refuses a recipient for good");
+            tracing::error!(outbox = message.id, verb, "the server refuses a recipient for good");
             Sending::Refused { reply }
         }
         Answer::NotNow { verb, why } => {
             let pause = pause(message);
             let wait_s = pause.num_seconds();
             tracing::warn!(
-                message = message.id,
+                outbox = message.id,
                 attempts = message.attempts + 1,
                 wait_s,
                 verb,

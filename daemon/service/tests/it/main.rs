@@ -4,6 +4,7 @@
     clippy::unwrap_used,
     clippy::panic,
     clippy::indexing_slicing,
+    clippy::wildcard_enum_match_arm,
     reason = "a test fails by panicking"
 )]
 
