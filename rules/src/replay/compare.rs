@@ -1,4 +1,5 @@
 //! A candidate protocol beside what happened.
+#![allow(clippy::wildcard_enum_match_arm, reason = "only tracings and over-reads are looked at")]
 
 use super::{Episode, Episodes, Period, With};
 use crate::decide::{Decider, Texts, ask};

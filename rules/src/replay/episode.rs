@@ -117,10 +117,11 @@ impl Episodes {
                     | NoticeReason::Withdrawn
                     | NoticeReason::Closed => false,
                 };
-                if let Some(known) = self.open.get_mut(&notice.alert.id).filter(|_| first) {
-                    if !known.told.iter().any(|(role, _)| *role == notice.role) {
-                        known.told.push((notice.role.clone(), notice.at));
-                    }
+                if let Some(known) = self.open.get_mut(&notice.alert.id)
+                    && first
+                    && !known.told.iter().any(|(role, _)| *role == notice.role)
+                {
+                    known.told.push((notice.role.clone(), notice.at));
                 }
             }
             Decision::Life { alert, at, step } => {

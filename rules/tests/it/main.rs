@@ -4,6 +4,10 @@
     clippy::unwrap_used,
     clippy::panic,
     clippy::indexing_slicing,
+    clippy::cast_possible_truncation,
+    clippy::cast_sign_loss,
+    clippy::wildcard_enum_match_arm,
+    clippy::disallowed_methods,
     reason = "a test that can't go on should stop where it stands"
 )]
 
