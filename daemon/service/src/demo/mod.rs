@@ -83,13 +83,7 @@ impl Demo {
         say(&format!("{CAUTIONS}\nWard {} of {}, from {}.\n", story.ward, story.hospital, {
             story.days.local(story.begins).format("%A %-d %B %Y, %H:%M")
         }));
-        let ended = tokio::select! {
-            told = tell(&story, &stage, self.speed) => told,
-            _ = tokio::signal::ctrl_c() => {
-                say("\nStopped by hand, before the end of the story.\n");
-                Ok(())
-            }
-        };
+        let ended = tell(&story, &stage, self.speed).await;
         match temporary {
             Some(temporary) if self.keep || ended.is_err() => {
                 let kept = temporary.keep();
@@ -114,9 +108,18 @@ async fn tell(story: &Story, stage: &Stage, speed: f64) -> Result<(), DemoError>
     let mut narrator = Narrator::new(story, &play.reader()?)?;
     let begun = play.now();
     let mut goes_on = true;
+    // Between two moments everything is at rest, so that this is where it can end.
+    let mut by_hand = std::pin::pin!(tokio::signal::ctrl_c());
     while let Some(stop) = play.next() {
         let due = started + wall(stop.at - begun, speed);
-        tokio::time::sleep(due.saturating_duration_since(Instant::now())).await;
+        tokio::select! {
+            biased;
+            _ = &mut by_hand => {
+                say("\nStopped by hand, before the end of the story.\n");
+                break;
+            }
+            () = tokio::time::sleep(due.saturating_duration_since(Instant::now())) => {}
+        }
         goes_on = goes_on && say(&narrator.announce(&stop));
         play.go(&stop).await?;
         goes_on = goes_on && say(&narrator.news(stop.at, &play.reader()?)?);
