@@ -147,7 +147,7 @@ fn fact(patient: &PatientId, place: usize, what: &Suppose, now: At) -> Fact {
 fn outlook(view: &View<'_>) -> Outlook {
     let says = ask(view);
     let mut lines: Vec<(usize, Line)> =
-        by_concern(&says).into_iter().filter_map(|(_, said)| line(view, said)).collect();
+        by_concern(&says).into_values().filter_map(|said| line(view, said)).collect();
     lines.sort_by(|a, b| b.0.cmp(&a.0).then_with(|| a.1.concern.cmp(&b.1.concern)));
     let active: Vec<_> = view.active().map(|(medicine, _)| medicine).collect();
     let pairs = active.iter().flat_map(|one| active.iter().map(move |other| (one, other)));

@@ -135,7 +135,7 @@ impl Check<'_> {
         if name.eq_ignore_ascii_case("global") {
             return None;
         }
-        if !LEADS.iter().any(|known| is(&known)) {
+        if !LEADS.iter().any(is) {
             self.add(
                 lead.span().start,
                 format!("`{name}` is neither `global` nor one of the twelve leads"),

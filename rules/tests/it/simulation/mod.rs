@@ -380,7 +380,7 @@ fn the_book_notices_what_is_wrong() {
     assert!(replayed(&[first.clone(), told.clone()], at).is_ok());
     let twice = replayed(&[first.clone(), told.clone(), first.clone()], at).unwrap_err();
     assert!(twice.contains("second open alert"), "{twice}");
-    let untold = replayed(&[first.clone()], at).unwrap_err();
+    let untold = replayed(std::slice::from_ref(&first), at).unwrap_err();
     assert!(untold.contains("nobody was told"), "{untold}");
     let dropped = replayed(&[first.clone(), told.clone()], by).unwrap_err();
     assert!(dropped.contains("an answer was due"), "{dropped}");
