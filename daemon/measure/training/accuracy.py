@@ -52,16 +52,16 @@ def table(found, rows):
     good = lambda r: r["answer"] == "good"
     given = lambda r: r["answer"] != "none"
     lines = [("LUDB T end over all leads, per beat: SD; robust SD; off by > 50 ms", "≤ 15; ≤ 9; ≤ 2 %",
-              f"{t['sd']}; {t['robust_sd']}; {t['gross50_pct']} % (mean {t['mean']})"),
-             ("LUDB QRS onset over all leads, per beat: SD; robust SD", "≤ 7; ≤ 5.5", f"{on['sd']}; {on['robust_sd']}"),
-             ("LUDB QT of lead II: within 20 / 30", "≥ 90 / ≥ 95 %", f"{ii['within20_pct']} / {ii['within30_pct']} %"),
+              f"{t['sd']:.1f}; {t['robust_sd']:.1f}; {t['gross50_pct']:.1f} % (mean {t['mean']:.1f})"),
+             ("LUDB QRS onset over all leads, per beat: SD; robust SD", "≤ 7; ≤ 5.5", f"{on['sd']:.1f}; {on['robust_sd']:.1f}"),
+             ("LUDB QT of lead II: within 20 / 30", "≥ 90 / ≥ 95 %", f"{ii['within20_pct']:.0f} / {ii['within30_pct']:.0f} %"),
              ("LUDB QT over all leads: mean; within 20 / 30; off by > 50 among `good`", "± 5; ≥ 90 / ≥ 95 %; none",
-              f"{g['mean']}; {g['within20_pct']} / {g['within30_pct']} %; {int(np.sum(abs(errors('ludb', good)) > 50))}"),
+              f"{g['mean']:.1f}; {g['within20_pct']:.0f} / {g['within30_pct']:.0f} %; {int(np.sum(abs(errors('ludb', good)) > 50))}"),
              ("LUDB answered", "≥ 97 %", f"{100 * np.mean([given(r) for r in rows if r['kind'] == 'ludb']):.0f} %"),
              ("QTDB T end, better of two leads, per beat: mean of records' SD; pooled; robust", "≤ 17; ≤ 28; ≤ 18",
-              f"{t2['sd_within']}; {t2['sd']}; {t2['robust_sd']}"),
-             ("QTDB QRS onset, better of two leads: mean of records' SD", "≤ 7", f"{on2['sd_within']}"),
-             ("QTDB QT, one answer: within 30; off by > 50", "≥ 82 %; ≤ 8 %", f"{one['within30_pct']} %; {one['off50_pct']} %"),
+              f"{t2['sd_within']:.1f}; {t2['sd']:.1f}; {t2['robust_sd']:.1f}"),
+             ("QTDB QRS onset, better of two leads: mean of records' SD", "≤ 7", f"{on2['sd_within']:.1f}"),
+             ("QTDB QT, one answer: within 30; off by > 50", "≥ 82 %; ≤ 8 %", f"{one['within30_pct']:.0f} %; {one['off50_pct']:.0f} %"),
              ("QTDB QT, one answer, `none` left out: within 30; refused", "≥ 85 %; ≤ 10 %",
               f"{share(errors('qtdb', given), 30):.0f} %; {100 * np.mean([not given(r) for r in rows if r['kind'] == 'qtdb']):.0f} %")]
     for kind in NAMES:
