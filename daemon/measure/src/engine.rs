@@ -41,6 +41,8 @@ pub(crate) struct Read {
     pub series: Option<Series>,
     pub remarks: Vec<Reason>,
     pub paced: bool,
+    /// From when to when nothing was read, in seconds: no RR is counted across.
+    pub holes: Vec<(f64, f64)>,
     /// Places of the leads that were used.
     pub used: Vec<usize>,
     /// µV from lowest to highest of each used lead's QRS.
@@ -69,6 +71,7 @@ pub(crate) fn measure(
         series: None,
         remarks: Vec::new(),
         paced: false,
+        holes: Vec::new(),
         used: Vec::new(),
         heights: Vec::new(),
     };
@@ -79,7 +82,12 @@ pub(crate) fn measure(
         // A last piece too short to stand alone belongs to the one before.
         let end = if to - at < piece + piece / 4 { to } else { at + piece };
         let cleaned = clean(recording, at, end);
-        piece_read(&cleaned, at as f64 / hz, learned, &mut read);
+        if !piece_read(&cleaned, at as f64 / hz, learned, &mut read) {
+            read.holes.push((at as f64 / hz, end as f64 / hz));
+            if !read.remarks.contains(&Reason::MissingSamples) {
+                read.remarks.push(Reason::MissingSamples);
+            }
+        }
         if typical.is_none() {
             typical = median_beat(&cleaned, &read, at as f64 / hz);
         }
@@ -89,7 +97,13 @@ pub(crate) fn measure(
         let remarks = std::mem::take(&mut read.remarks);
         return nothing(recording, vec![Reason::NoUsableLead], remarks);
     }
-    let rr: Vec<f64> = read.beats.windows(2).map(|w| (w[1].r_s - w[0].r_s) * 1000.0).collect();
+    let holed =
+        |from: f64, to: f64| read.holes.iter().any(|(start, end)| from < *end && to > *start);
+    let rr: Vec<f64> = read
+        .beats
+        .windows(2)
+        .map(|w| if holed(w[0].r_s, w[1].r_s) { f64::NAN } else { (w[1].r_s - w[0].r_s) * 1000.0 })
+        .collect();
     let normal: Vec<bool> = read.beats.iter().map(|beat| beat.normal).collect();
     read.series = series(&rr, &normal);
     leave_out_early(&mut read, &rr);
@@ -117,8 +131,14 @@ fn unread(lead: &Lead) -> LeadReading {
     LeadReading { lead: lead.clone(), qt: None, qrs: None, t_amplitude: None, used: false }
 }
 
-/// Finds and reads the beats of one piece that begins `start_s` into the file.
-fn piece_read(cleaned: &Cleaned, start_s: f64, learned: Option<&Reader>, read_all: &mut Read) {
+/// Finds and reads the beats of one piece that begins `start_s` into the file; `false` where nothing of it could be
+/// used.
+fn piece_read(
+    cleaned: &Cleaned,
+    start_s: f64,
+    learned: Option<&Reader>,
+    read_all: &mut Read,
+) -> bool {
     for remark in &cleaned.remarks {
         if !read_all.remarks.contains(remark) {
             read_all.remarks.push(remark.clone());
@@ -126,13 +146,13 @@ fn piece_read(cleaned: &Cleaned, start_s: f64, learned: Option<&Reader>, read_al
     }
     let r = beats::r_peaks(&cleaned.leads);
     if r.len() < 2 {
-        return;
+        return false;
     }
     let places: Vec<usize> = cleaned.leads.iter().map(|lead| lead.place).collect();
     if read_all.used.is_empty() {
         read_all.used = places;
     } else if read_all.used != places {
-        return; // another set of leads than before: its marks could not be set beside theirs
+        return false; // another set of leads than before: its marks could not be set beside theirs
     }
     let uv: Vec<&[f32]> = cleaned.leads.iter().map(|lead| lead.uv.as_slice()).collect();
     let beats = Beats { leads: &uv, hz: HZ as f32, r: &r };
@@ -162,6 +182,7 @@ fn piece_read(cleaned: &Cleaned, start_s: f64, learned: Option<&Reader>, read_al
             group: of_beat[i],
         });
     }
+    true
 }
 
 /// Typical height of a lead's QRS, µV.
@@ -186,7 +207,7 @@ fn leave_out_early(read: &mut Read, rr: &[f64]) {
     if read.series.as_ref().is_some_and(|series| series.rhythm == Rhythm::IrregularlyIrregular) {
         return;
     }
-    let middle = median(rr);
+    let middle = median(&rr.iter().copied().filter(|rr| rr.is_finite()).collect::<Vec<_>>());
     let early: Vec<bool> =
         (0..read.beats.len()).map(|i| i > 0 && rr[i - 1] < 0.8 * middle).collect();
     let odd: Vec<bool> =
@@ -282,7 +303,6 @@ fn median_beat(cleaned: &Cleaned, read: &Read, start_s: f64) -> Option<MedianBea
     const MOST: usize = 30;
     const BEFORE_S: f64 = 0.3;
     let counted: Vec<&ReadBeat> = read.beats.iter().filter(|beat| beat.normal).take(MOST).collect();
-    let first = counted.first()?;
     let count = |group: usize| counted.iter().filter(|beat| beat.group == group).count();
     let group = counted
         .iter()
@@ -292,7 +312,6 @@ fn median_beat(cleaned: &Cleaned, read: &Read, start_s: f64) -> Option<MedianBea
     let after = f64::from((marks.last + 190.0).clamp(500.0, 1100.0)) / 1000.0;
     let (before, after) = ((BEFORE_S * HZ) as usize, (after * HZ) as usize);
     let like: Vec<&&ReadBeat> = counted.iter().filter(|beat| beat.group == group).collect();
-    let _ = first;
     let at = |ms: f32| Ms::new(f64::from(ms) + BEFORE_S * 1000.0);
     let leads = cleaned
         .leads

@@ -92,7 +92,7 @@ impl fmt::Display for Reason {
             Reason::Noise => write!(f, "noise covers the T wave"),
             Reason::TpFused => write!(f, "T wave runs into the next P wave"),
             Reason::LateWave => {
-                write!(f, "a second wave follows T; it may be a U wave or part of T")
+                write!(f, "it is not clear which wave ends T; a U wave may follow")
             }
             Reason::Paced => write!(f, "pacing spikes found"),
             Reason::WideQrs(ms) => {
@@ -260,7 +260,7 @@ pub struct Measurement {
     pub answer: Answer,
     /// Things worth saying that do not lower the answer (a swapped pair in leads that were not used).
     pub remarks: Vec<Reason>,
-    /// Mean RR over the beats that count.
+    /// Mean RR over all intervals, those of ectopic beats too: the ventricular rate. Not across a hole.
     pub rr: Option<Ms>,
     /// 60,000 / mean RR.
     pub rate: Option<PerMinute>,

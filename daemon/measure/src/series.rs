@@ -19,25 +19,27 @@ pub(crate) struct Series {
     pub drifts: bool,
 }
 
-/// Judges intervals (ms) between neighbouring beats; `of_shape[i]` says whether beat i is of the dominant shape.
+/// Judges intervals (ms; not a number across a hole) between neighbouring beats; `of_shape[i]` says whether beat i is of the dominant shape.
 /// `None` under two beats. A regular rhythm varies by less than 10 % about its median (common practice, no source);
 /// without a pattern is what keeps varying from beat to beat even among beats of one shape.
 pub(crate) fn series(rr_ms: &[f64], of_shape: &[bool]) -> Option<Series> {
-    if rr_ms.is_empty() {
+    let known: Vec<f64> = rr_ms.iter().copied().filter(|rr| rr.is_finite()).collect();
+    if known.is_empty() {
         return None;
     }
-    let middle = median(rr_ms);
+    let middle = median(&known);
     // Intervals between beats of the dominant shape, neither early nor the pause after an early one.
     let own: Vec<f64> = rr_ms
         .iter()
         .enumerate()
         .filter(|(i, _)| of_shape.get(*i) == Some(&true) && of_shape.get(i + 1) == Some(&true))
         .map(|(_, rr)| *rr)
+        .filter(|rr| rr.is_finite())
         .collect();
-    let counted = if own.len() >= 2 { &own } else { rr_ms };
-    let mean = rr_ms.iter().sum::<f64>() / rr_ms.len() as f64;
-    let off = rr_ms.iter().filter(|rr| (*rr - middle).abs() > 0.1 * middle).count() as f64
-        / rr_ms.len() as f64;
+    let counted = if own.len() >= 2 { &own } else { &known };
+    let mean = known.iter().sum::<f64>() / known.len() as f64;
+    let off = known.iter().filter(|rr| (*rr - middle).abs() > 0.1 * middle).count() as f64
+        / known.len() as f64;
     let steps: Vec<f64> = counted.windows(2).map(|w| (w[1] - w[0]).abs() / middle).collect();
     let jumpy =
         steps.iter().filter(|step| **step > 0.08).count() as f64 / steps.len().max(1) as f64;
@@ -92,6 +94,14 @@ mod tests {
             Rhythm::IrregularlyIrregular
         );
         assert_eq!(says(&[500.0, 1000.0, 510.0, 990.0, 505.0, 1005.0, 500.0]), Rhythm::Irregular);
+    }
+
+    #[test]
+    fn a_hole_is_no_interval() {
+        let found = series(&[800.0, 810.0, f64::NAN, 790.0, 800.0], &[true; 6]).unwrap();
+        assert!((found.mean_ms - 800.0).abs() < 1e-9);
+        assert_eq!(found.rhythm, Rhythm::Regular);
+        assert_eq!(series(&[f64::NAN], &[true; 2]), None);
     }
 
     #[test]

@@ -124,8 +124,12 @@ pub(crate) fn judge(read: &Read) -> Verdict {
     if value(&|group| Some(group.t_end? - group.last)).is_some_and(|beyond| beyond > 0.0) {
         doubts.push(Reason::TpFused);
     }
+    // Across a hole beats may be missing, and with them the rate; a lead that is off only leaves the others.
+    let (holes, other): (Vec<_>, Vec<_>) =
+        read.remarks.iter().cloned().partition(|remark| *remark == Reason::MissingSamples);
+    doubts.extend(holes);
     let remarks = &mut verdict.remarks;
-    remarks.extend(read.remarks.iter().cloned());
+    remarks.extend(other);
     if let Some(wide) = qrs.filter(|qrs| *qrs >= WIDE_MS).and_then(Ms::new) {
         remarks.push(Reason::WideQrs(wide));
     }
