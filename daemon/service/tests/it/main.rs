@@ -15,6 +15,7 @@ mod folder;
 mod house;
 mod kill;
 mod outbox;
+mod process;
 mod program;
 mod storm;
 mod ward;
