@@ -1,11 +1,13 @@
 //! The command line: one file a command.
 
+mod agree;
 mod alerts;
 mod audit;
 mod backup;
 mod check;
 mod held;
 mod measure;
+mod report;
 mod settings;
 mod watch;
 
@@ -32,6 +34,8 @@ enum Command {
     Check(check::Check),
     Alerts(alerts::Alerts),
     Held(held::Held),
+    Report(report::Report),
+    Agree(agree::Agree),
     Audit(audit::Audit),
     Backup(backup::Backup),
 }
@@ -75,6 +79,8 @@ pub fn run() -> ExitCode {
         Command::Check(check) => check.run(),
         Command::Alerts(alerts) => alerts.run(),
         Command::Held(held) => held.run(),
+        Command::Report(report) => report.run(),
+        Command::Agree(agree) => agree.run(),
         Command::Audit(audit) => audit.run(),
         Command::Backup(backup) => backup.run(),
     }
