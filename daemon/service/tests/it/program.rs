@@ -172,3 +172,32 @@ async fn held_lists_name_and_reason_while_the_service_runs() {
     );
     service.stop().await.unwrap();
 }
+
+/// The reader's table: good rows compared, bad ones named, and a tracing without a QT told as such.
+#[test]
+fn agree_names_what_it_could_not_use() {
+    let folder = tempfile::tempdir().unwrap();
+    flat(folder.path(), "a");
+    std::fs::write(
+        folder.path().join("t.csv"),
+        "file,qt_ms,lead\na.hea,400,II\nb.hea,410,\nc.hea,0.4,\n",
+    )
+    .unwrap();
+    let output = ebbmark(&["agree", "t.csv"], folder.path());
+    assert_eq!(code(&output), 1, "a row and a file could not be used");
+    assert!(
+        out(&output)
+            .contains("2 tracings with a local reading; no QT told by the engine on 1 of them")
+    );
+    assert!(err(&output).contains("line 4 of the table") && err(&output).contains("b.hea"));
+    assert_eq!(code(&ebbmark(&["agree", "none.csv"], folder.path())), 2);
+}
+
+/// The committee's figures carry no patient, and a period that ends before it begins is wrong use.
+#[test]
+fn report_needs_a_period_and_a_store() {
+    let folder = tempfile::tempdir().unwrap();
+    let backwards =
+        ["report", "--from", "2027-03-02", "--to", "2027-03-01", "--settings", "none.toml"];
+    assert_eq!(code(&ebbmark(&backwards, folder.path())), 2);
+}
