@@ -388,7 +388,7 @@ folder = { path = "mail" }
             (
                 "settle_ms = 2000",
                 "settle_ms = \"2 s\"",
-                "line 12, column 13: invalid type: string \"2 s\", expected u64",
+                "line 12, column 13: expected a whole number of 0 or more, found \"2 s\"",
             ),
             (
                 "Europe/Lisbon",
