@@ -1,6 +1,7 @@
 //! The service.
 
 pub mod agree;
+pub mod answers;
 pub mod clock;
 pub mod commands;
 pub mod delivery;

@@ -174,6 +174,8 @@ impl Service {
         tasks.spawn(deadlines(ledger.clone(), clock.clone(), stop.clone()));
         tasks.spawn(deliver(ledger.clone(), settings_out.clone(), clock.clone(), stop.clone()));
         tasks.spawn(say_daily(ledger.clone(), settings_out.clone(), clock, stop.clone()));
+        let store = settings_out.borrow().folders.store.clone();
+        tasks.spawn(crate::answers::take_up(ledger.clone(), store, stop.clone()));
         tasks.spawn(look_after(ledger.clone(), settings_out, stop.clone()));
         tasks.close();
         Ok(Service {

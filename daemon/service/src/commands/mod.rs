@@ -2,6 +2,7 @@
 
 mod agree;
 mod alerts;
+mod answer;
 mod audit;
 mod backup;
 mod check;
@@ -33,6 +34,7 @@ enum Command {
     Measure(measure::Measure),
     Check(check::Check),
     Alerts(alerts::Alerts),
+    Answer(answer::AnswerTo),
     Held(held::Held),
     Report(report::Report),
     Agree(agree::Agree),
@@ -78,6 +80,7 @@ pub fn run() -> ExitCode {
         Command::Measure(measure) => measure.run(),
         Command::Check(check) => check.run(),
         Command::Alerts(alerts) => alerts.run(),
+        Command::Answer(answer) => answer.run(),
         Command::Held(held) => held.run(),
         Command::Report(report) => report.run(),
         Command::Agree(agree) => agree.run(),

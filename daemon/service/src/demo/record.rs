@@ -116,7 +116,7 @@ pub fn summary(story: &Story, reader: &Reader) -> Result<String, StoreError> {
             }
         );
         if alert.told.is_empty() {
-            text.push_str("      told: nobody; it stood on the ward page\n");
+            text.push_str("      told: nobody; `ebbmark alerts` showed it\n");
         } else {
             let _ = writeln!(text, "      told: {}", alert.told.join("; "));
         }

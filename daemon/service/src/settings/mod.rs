@@ -129,8 +129,8 @@ pub struct Words {
 impl Default for Words {
     fn default() -> Self {
         Words {
-            answer: "On the ward page, under your own name: take it on, put it off, or hand it over. Opening this mail \
-                     or replying to it is no answer."
+            answer: "With `ebbmark answer`, the alert's number and your own name: take it on, hand it over, or close it. \
+                     Opening this mail or replying to it is no answer."
                 .to_owned(),
             sign_off: String::new(),
         }
