@@ -72,7 +72,10 @@ pub(crate) async fn take_up(ledger: Ledger, store: PathBuf, stop: CancellationTo
                 },
                 Err(error) => {
                     tracing::error!(%error, "an answer can't be understood and is set aside");
-                    let _ = std::fs::rename(&path, path.with_extension("wrong")); // else it is met again, and said again
+                    // Else it is met again, and said again.
+                    if let Err(error) = std::fs::rename(&path, path.with_extension("wrong")) {
+                        tracing::error!(%error, "an answer can't be set aside");
+                    }
                 }
             }
         }

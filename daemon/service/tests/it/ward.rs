@@ -308,3 +308,34 @@ async fn without_any_good_protocol_nothing_starts() {
     let error = Service::start(setup).await.unwrap_err().to_string();
     assert!(error.contains("protocol.toml, line 1, column "), "{error}");
 }
+
+/// The way that a person has: `ebbmark answer` beside the running service.
+#[tokio::test(flavor = "multi_thread")]
+async fn answer_from_the_command_line_is_taken_up_and_ends_the_waiting() {
+    let house = House::new();
+    let (service, hand) = ward(&house).await;
+    service.ledger().learn(admitted_with_qt(520.0)).await.unwrap();
+    wait_first(&house);
+    let alert = call(&house).alert.id;
+    let answer = |act: [&str; 2]| {
+        let settings = house.settings_file();
+        let output = std::process::Command::new(env!("CARGO_BIN_EXE_ebbmark"))
+            .args(["answer", alert.as_str(), "--by", "ines.quill", act[0], act[1], "--settings"])
+            .arg(settings)
+            .output()
+            .unwrap();
+        output.status.code().unwrap()
+    };
+    assert_eq!(answer(["--hand-over", "night porter"]), 2, "a role that reaches nobody");
+    assert_eq!(answer(["--acknowledge", "fine"]), 2, "no intent of the protocol");
+    assert_eq!(answer(["--acknowledge", "prescriber informed"]), 0);
+    let until = std::time::Instant::now() + std::time::Duration::from_secs(20);
+    while call(&house).alert.state != AlertState::Acknowledged {
+        assert!(std::time::Instant::now() < until, "the answer was not taken up");
+        tokio::time::sleep(std::time::Duration::from_millis(20)).await;
+    }
+    hand.set(start() + TimeDelta::minutes(40));
+    service.ledger().advance().await.unwrap();
+    assert_eq!(house.mails_to("ward-doctor"), 0, "an answered alert does not go on");
+    service.stop().await.unwrap();
+}
